@@ -1,0 +1,5 @@
+//! One channel, all stages: the one place that calls them.
+
+mod result;
+
+pub use result::{BoundaryNear, ChannelResult, Contributions, Illegal, Method, Origin, Reason, Rule, Tone, Verdict};

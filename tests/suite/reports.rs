@@ -1,0 +1,1 @@
+//! Placeholder: filled with the stage it checks.
