@@ -1,5 +1,7 @@
 //! One channel, all stages: the one place that calls them.
 
 mod result;
+mod verdict;
 
 pub use result::{BoundaryNear, ChannelResult, Contributions, Illegal, Method, Origin, Reason, Rule, Tone, Verdict};
+pub use verdict::{Evidence, MaskState, judge};

@@ -7,6 +7,7 @@ use serde::Serialize;
 use crate::base::{Assumption, Basis, Exact, Frequency};
 use crate::loop_model::{ChargeTable, FilterComponents, FilterDesign, NoisePoints, ResponseTable};
 use crate::modulator::{Dither, ModulatorSettings, ModulusRule};
+use crate::tones::Mechanism;
 
 /// A whole checked plan.
 #[derive(Debug, Clone, Serialize)]
@@ -272,18 +273,6 @@ pub struct Boundary {
     pub largest_q: u64,
     /// Harmonics listed.
     pub harmonics: u64,
-}
-
-/// Path by which a coupled tone reaches the output.
-#[derive(Debug, Clone, Copy, PartialEq, Eq, Serialize)]
-#[serde(rename_all = "lowercase")]
-pub enum Mechanism {
-    /// Through the phase detector: follows |H|.
-    Detector,
-    /// Through the tuning node: follows |E|/f.
-    Tuning,
-    /// After the loop: follows neither.
-    Output,
 }
 
 /// Where an anchor was taken.

@@ -2,8 +2,9 @@
 
 mod checked;
 
+pub use crate::tones::Mechanism;
 pub use checked::{
     Alternatives, Analysis, Anchor, AnchorPlace, Boundary, ChannelGroup, ChannelList, Clock, Detector, Divider, Gain,
-    Guard, Identity, Limits, LoopEdge, LoopPlan, Mask, Mechanism, MismatchPoints, ModulatorPlan, Oscillator,
-    OscillatorNoise, Plan, Reference,
+    Guard, Identity, Limits, LoopEdge, LoopPlan, Mask, MismatchPoints, ModulatorPlan, Oscillator, OscillatorNoise,
+    Plan, Reference,
 };
