@@ -1,8 +1,9 @@
 //! The checked description of a modulator.
 
 use serde::Serialize;
-use thiserror::Error;
 
+use super::error::ModulatorError;
+use super::register::tap_pair;
 use crate::base::Frequency;
 
 /// The circuit that turns a constant numerator into a sequence of integers with mean `K/M`.
@@ -19,6 +20,41 @@ pub enum Structure {
     OutputFed,
     /// One quantiser with an error filter, orders 1–4.
     ErrorFeedback,
+}
+
+impl Structure {
+    /// Returns the word used in plans and outputs.
+    #[must_use]
+    pub const fn word(self) -> &'static str {
+        match self {
+            Self::Integer => "integer",
+            Self::Mash => "mash",
+            Self::PrimeMash => "prime-mash",
+            Self::OutputFed => "output-fed",
+            Self::ErrorFeedback => "error-feedback",
+        }
+    }
+
+    /// Returns the lowest and the highest order, both allowed.
+    #[must_use]
+    pub const fn orders(self) -> (u8, u8) {
+        match self {
+            Self::Integer => (0, 0),
+            Self::Mash | Self::PrimeMash | Self::OutputFed => (1, 5),
+            Self::ErrorFeedback => (1, 4),
+        }
+    }
+
+    /// Returns the last stage whose input can take dither: an error-feedback modulator has one
+    /// quantiser, so one input; an integer divider has none.
+    #[must_use]
+    pub const fn last_dither_stage(self, order: u8) -> u8 {
+        match self {
+            Self::Integer => 0,
+            Self::Mash | Self::PrimeMash | Self::OutputFed => order,
+            Self::ErrorFeedback => 1,
+        }
+    }
 }
 
 /// A one-bit sequence added to the input of a stage.
@@ -90,19 +126,94 @@ pub struct ModulatorSettings {
     pub seeds: Vec<u64>,
     /// Dither.
     pub dither: Dither,
-    /// Coefficients h_1 … h_n of the error filter (`error-feedback` only); `None` is (1 − z⁻¹)^order.
+    /// Coefficients h_1 … h_order of the error filter (`error-feedback` only): y = ⌊(K + Σ h_j·e[n − j])/M⌋, so the
+    /// noise transfer is 1 − Σ h_j·z⁻ʲ. `None` is (1 − z⁻¹)^order, for example h = \[2, −1\] at order 2.
     pub noise_transfer: Option<Vec<i64>>,
     /// Whether the modulator keeps running at K = 0.
     pub runs_at_zero: bool,
 }
 
-/// Why a modulator cannot be set up.
-#[derive(Debug, Clone, PartialEq, Eq, Error)]
-pub enum ModulatorError {
-    /// The modulus is zero or above 2^48.
-    #[error("modulus {found} is outside 1 … 2^48")]
-    ModulusOutOfRange {
-        /// The value found.
-        found: u64,
-    },
+impl ModulatorSettings {
+    /// The largest magnitude of an error filter coefficient: outputs stay far inside 32 bits.
+    pub const LARGEST_COEFFICIENT: i64 = 1024;
+
+    /// Checks all that can be known without a word: order, stages, dither, error filter.
+    ///
+    /// # Errors
+    /// The first `ModulatorError` found, in the order of the fields.
+    ///
+    /// # Examples
+    /// ```
+    /// use thornmap::modulator::{Dither, ModulatorSettings, Structure};
+    /// let mut settings = ModulatorSettings {
+    ///     structure: Structure::Mash,
+    ///     order: 3,
+    ///     seeds: vec![1],
+    ///     dither: Dither::None,
+    ///     noise_transfer: None,
+    ///     runs_at_zero: false,
+    /// };
+    /// assert!(settings.check().is_ok());
+    /// settings.order = 9;
+    /// assert_eq!(settings.check().unwrap_err().to_string(), "order 9 of structure \"mash\" is outside 1 … 5");
+    /// ```
+    pub fn check(&self) -> Result<(), ModulatorError> {
+        let (lowest, highest) = self.structure.orders();
+        if !(lowest..=highest).contains(&self.order) {
+            return Err(ModulatorError::OrderOutOfRange {
+                structure: self.structure.word(),
+                found: self.order,
+                lowest,
+                highest,
+            });
+        }
+        if self.seeds.len() > usize::from(self.order) {
+            return Err(ModulatorError::TooManySeeds { found: self.seeds.len(), stages: self.order });
+        }
+        self.check_dither()?;
+        self.check_noise_transfer()
+    }
+
+    /// Checks stage, register and weight of the dither.
+    fn check_dither(&self) -> Result<(), ModulatorError> {
+        let Dither::Register { stage, register, seed, weight } = self.dither else {
+            return Ok(());
+        };
+        let highest = self.structure.last_dither_stage(self.order);
+        if highest == 0 {
+            return Err(ModulatorError::NoDitherInput { structure: self.structure.word() });
+        }
+        if !(1..=highest).contains(&stage) {
+            return Err(ModulatorError::DitherStageOutOfRange { found: stage, highest });
+        }
+        if tap_pair(register).is_none() {
+            return Err(ModulatorError::UnknownRegister { found: register });
+        }
+        let largest = (1u64 << register) - 1;
+        if !(1..=largest).contains(&seed) {
+            return Err(ModulatorError::RegisterSeedOutOfRange { found: seed, register, largest });
+        }
+        if !(1..=Modulus::LARGEST).contains(&weight) {
+            return Err(ModulatorError::DitherWeightOutOfRange { found: weight, largest: Modulus::LARGEST });
+        }
+        Ok(())
+    }
+
+    /// Checks the coefficients of the error filter.
+    fn check_noise_transfer(&self) -> Result<(), ModulatorError> {
+        let Some(coefficients) = &self.noise_transfer else {
+            return Ok(());
+        };
+        if self.structure != Structure::ErrorFeedback {
+            return Err(ModulatorError::NoErrorFilter { structure: self.structure.word() });
+        }
+        if coefficients.len() != usize::from(self.order) {
+            return Err(ModulatorError::CoefficientCount { found: coefficients.len(), order: self.order });
+        }
+        let largest = Self::LARGEST_COEFFICIENT;
+        match coefficients.iter().find(|h| !(-largest..=largest).contains(*h)) {
+            Some(&found) => Err(ModulatorError::CoefficientOutOfRange { found, largest }),
+            None => Ok(()),
+        }
+    }
 }
