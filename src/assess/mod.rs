@@ -1,7 +1,9 @@
 //! One channel, all stages: the one place that calls them.
 
+mod placement;
 mod result;
 mod verdict;
 
+pub use placement::{Placement, PlacementError, place};
 pub use result::{BoundaryNear, ChannelResult, Contributions, Illegal, Method, Origin, Reason, Rule, Tone, Verdict};
 pub use verdict::{Evidence, MaskState, judge};

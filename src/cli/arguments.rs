@@ -1,0 +1,116 @@
+//! What can be typed.
+
+use std::path::PathBuf;
+
+use clap::{Args, Parser, Subcommand, ValueEnum, ValueHint};
+
+/// Maps the thorns, the spurious tones, in a fractional-N channel plan.
+///
+/// Exit status: 0 done; 1 a file or folder cannot be read or written; 2 arguments or plan unusable;
+/// 3 everything written and --fail-on met.
+#[derive(Debug, Parser)]
+#[command(name = "thornmap", version, max_term_width = 100, arg_required_else_help = true)]
+pub struct Arguments {
+    /// What to do.
+    #[command(subcommand)]
+    pub command: Command,
+}
+
+/// The commands.
+#[derive(Debug, Subcommand)]
+pub enum Command {
+    /// Survey a whole plan: words, tones, noise, verdicts; write the report set
+    Survey(SurveyArguments),
+    /// Show one channel in full, with the proof of its verdict
+    Channel(ChannelArguments),
+    /// Validate a plan and say what it holds
+    Check(PlanArgument),
+    /// Print a commented starter plan
+    Example,
+    /// Print the JSON Schema of plan files, for editors
+    Schema,
+    /// Print shell completions
+    Completions {
+        /// The shell
+        shell: clap_complete::Shell,
+    },
+    /// Print the manual page
+    Man,
+}
+
+/// Options that every working command takes.
+#[derive(Debug, Args)]
+pub struct CommonOptions {
+    /// Print the result as JSON on standard output, and nothing else there
+    #[arg(long)]
+    pub json: bool,
+    /// Threads to use [default: all cores]
+    #[arg(long, value_name = "N", value_parser = clap::value_parser!(u16).range(1..=1024))]
+    pub jobs: Option<u16>,
+    /// No messages on standard error unless something fails
+    #[arg(long, short)]
+    pub quiet: bool,
+    /// Exit with status 3 when a channel is bad, or marginal or worse
+    #[arg(long, value_name = "VERDICT")]
+    pub fail_on: Option<FailOn>,
+}
+
+/// The state from which a run counts as failed.
+#[derive(Debug, Clone, Copy, PartialEq, Eq, ValueEnum)]
+pub enum FailOn {
+    /// Any bad channel
+    Bad,
+    /// Any marginal or bad channel
+    Marginal,
+}
+
+/// How many channels the outputs hold.
+#[derive(Debug, Clone, Copy, PartialEq, Eq, ValueEnum)]
+pub enum DetailChoice {
+    /// Every channel
+    All,
+    /// Bad and marginal channels only
+    Flagged,
+}
+
+/// A plan file.
+#[derive(Debug, Args)]
+pub struct PlanArgument {
+    /// Plan file (TOML)
+    #[arg(value_name = "PLAN", value_hint = ValueHint::FilePath)]
+    pub plan: PathBuf,
+}
+
+/// Arguments of `survey`.
+#[derive(Debug, Args)]
+pub struct SurveyArguments {
+    /// Plan file (TOML) [default: the built-in demonstration plan]
+    #[arg(value_name = "PLAN", value_hint = ValueHint::FilePath)]
+    pub plan: Option<PathBuf>,
+    /// Folder for the report set; absent, empty or an earlier report set [default: reports/<plan stem>]
+    #[arg(long, value_name = "DIR", value_hint = ValueHint::DirPath)]
+    pub out: Option<PathBuf>,
+    /// Channels written in full [default: all up to 20,000 channels, flagged beyond]
+    #[arg(long)]
+    pub detail: Option<DetailChoice>,
+    #[command(flatten)]
+    #[allow(missing_docs, reason = "clap shows the options of the group itself")]
+    pub common: CommonOptions,
+}
+
+/// Arguments of `channel`.
+#[derive(Debug, Args)]
+pub struct ChannelArguments {
+    /// Plan file (TOML)
+    #[arg(value_name = "PLAN", value_hint = ValueHint::FilePath)]
+    pub plan: PathBuf,
+    /// Channel frequency with unit, before injection, for example "433.2 MHz"
+    #[arg(value_name = "FREQUENCY")]
+    pub frequency: String,
+    /// Channel group [default: the first whose range holds the frequency]
+    #[arg(long, value_name = "NAME")]
+    pub group: Option<String>,
+    #[command(flatten)]
+    #[allow(missing_docs, reason = "clap shows the options of the group itself")]
+    pub common: CommonOptions,
+}
