@@ -71,3 +71,28 @@ pub(super) fn cascade_period(k: u64, seeds: &[u64], modulus: u64) -> u128 {
     }
     period
 }
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+    use num_bigint::BigUint;
+
+    #[test]
+    fn binomials_equal_those_of_unbounded_integers() {
+        let mut checked = 0;
+        let tops = (0..12u128).chain([1 << 24, (1 << 53) - 1, (1 << 60) + 7, (1 << 100) + 4, u128::MAX]);
+        for top in tops {
+            for count in 0..=5u32 {
+                let product = (0..u128::from(count)).map(|j| BigUint::from(top.saturating_sub(j))).product::<BigUint>();
+                let exact = product / BigUint::from((1..=count).product::<u32>());
+                let exact = if top < u128::from(count) { BigUint::ZERO } else { exact };
+                for modulus in [1u64, 2, 7, 60, 1 << 24, (1 << 48) - 59, 1 << 48] {
+                    let want = &exact % BigUint::from(modulus);
+                    assert_eq!(BigUint::from(binomial_modulo(top, count, modulus)), want, "C({top}, {count})");
+                    checked += 1;
+                }
+            }
+        }
+        assert_eq!(checked, 17 * 6 * 7);
+    }
+}

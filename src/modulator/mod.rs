@@ -1,4 +1,15 @@
 //! Integer-only modulator engine: what drives the divider, bit for bit.
+//!
+//! A [`Word`] N, K, M comes from an exact ratio ([`word::nearest`]); [`ModulatorSettings`] with K and M make a checked
+//! [`ModulatorConfig`]; [`start`] runs it, [`period`], [`transient`], [`output_range`] and the getters of the
+//! configuration say what is known without running.
+//!
+//! Conventions: y\[n\] is the integer added to N in PFD cycle n, counted from 0; residues and errors lie in 0 … M − 1;
+//! "over a period" means outputs t … t + T − 1 with t = [`transient`]; the phase error is in cycles of the VCO.
+//!
+//! A new structure: a variant of [`Structure`] with its word and orders (`config`), its stage as a `StageRule`
+//! (`cascade`) or a module of its own, one line in [`start`], its range and transient (`range`), its length (`period`),
+//! and its recurrence once more, slowly, in [`oracle`]. The compiler names every place; the suite tests the rest.
 
 mod cascade;
 mod checked;

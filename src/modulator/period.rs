@@ -6,7 +6,7 @@ use super::cascade::{InputSource, OutputFedStage, PlainStage, Silent, Stage, Sta
 use super::checked::{ModulatorConfig, Shaping};
 use super::closed_form::cascade_period;
 use super::config::{Dither, Structure};
-use super::error_feedback::ErrorFilter;
+use super::error_feedback::{ErrorFilter, MOST_TAPS};
 use super::range::{settled_at, transient};
 use super::sequence::prime_stage;
 
@@ -199,15 +199,16 @@ fn stage_sums_with<R: StageRule, S: InputSource>(
     Some(period)
 }
 
-/// Returns the cycle length of the state of an error-feedback modulator (with its register) by Brent's method; `None`
-/// where it passes `most_steps`.
+/// Returns the cycle length of the state of an error-feedback modulator (with its register), found by
+/// waiting for the return of a state that is surely on the cycle; `None` where it passes `most_steps`.
 fn filter_cycle(config: &ModulatorConfig, most_steps: u64) -> Option<u128> {
     let mut state = (ErrorFilter::new(config), WeightedBit::of(config));
     let advance = |(filter, source): &mut (ErrorFilter, Option<WeightedBit>)| {
         let added = source.as_mut().map_or(0, |source| source.added_at(0));
         filter.next_output(i64::try_from(added).expect("a weight is at most 2^48"));
     };
-    for _ in 0..transient(config) {
+    // The filter keeps errors beyond its order too: they must have come from the run.
+    for _ in 0..transient(config) + MOST_TAPS {
         advance(&mut state);
     }
     // On the cycle already: the first return to this state is the length.

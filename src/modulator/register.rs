@@ -106,9 +106,9 @@ mod tests {
                 if factor * factor > rest {
                     factor = rest;
                 }
-                if rest % factor == 0 {
+                if rest.is_multiple_of(factor) {
                     assert_ne!(power(period / factor, length, tap), 1, "{length}: order divides by {factor}");
-                    while rest % factor == 0 {
+                    while rest.is_multiple_of(factor) {
                         rest /= factor;
                     }
                 }

@@ -70,8 +70,10 @@ pub(super) fn prime_stage(config: &ModulatorConfig) -> PrimeStage {
 
 /// Writes the running phase error in units of 1/M cycle: `out[n]` = M·φ\[n\] = Σ_{i ≤ n} (M·y\[i\] − K).
 ///
-/// The slices have one length. For the outputs of one of our modulators |M·φ| stays below 2^(order − 1)·M ≤ 2^52 (plus
-/// what dither at stage 1 adds over the run, below 2^48 a sample); other outputs are caught when the sum passes 63 bits.
+/// The slices have one length. Without dither and for a noise transfer that vanishes at zero frequency, |M·φ| stays
+/// below 2^(order − 1)·M ≤ 2^52 from the first output on: the first carry follows its ramp within M, and the sum over
+/// the differences of the other carries is their combination of order − 1, at most 2^(order − 2). What drifts is caught
+/// when the sum passes 63 bits.
 ///
 /// # Errors
 /// `PhaseOverflow` with the index of the first output at which the sum does not fit; `out` is then filled up to it.

@@ -268,6 +268,39 @@ mod tests {
     }
 
     #[test]
+    fn a_fixed_modulus_is_missed_by_half_a_step_at_most() {
+        let (half, mut checked) = (exact(1, 2), 0);
+        for m in [2u64, 3, 1000, 1 << 24, (1 << 48) - 59, 1 << 48] {
+            for i in 0..200i128 {
+                // 25/3 kHz raster from 400 MHz at P = 4 on 19.2 MHz, and an offset that reduces to nothing.
+                let hz = exact(400_000_000 * 3 + 25_000 * i, 3).plus(&exact(i, 7)).unwrap();
+                let ratio = hz.times(&exact(4, 19_200_000)).unwrap();
+                let word = nearest(ratio, &fixed(m), Frequency::from_whole_hz(19_200_000), 4).unwrap();
+                let miss = word.ratio().minus(&ratio).unwrap().times(&exact(m.into(), 1)).unwrap().abs();
+                assert!(miss <= half, "{ratio} over {m}: {miss}");
+                assert!(word.k < m);
+                checked += 1;
+            }
+        }
+        assert_eq!(checked, 6 * 200);
+    }
+
+    #[test]
+    fn a_step_makes_every_channel_of_its_raster_exact() {
+        let (step, pfd) = (Frequency::from_hz(exact(25_000, 3)), Frequency::from_whole_hz(19_200_000));
+        for i in 0..500 {
+            let output = exact(433_000_000, 1).plus(&step.hz().times(&exact(i, 1)).unwrap()).unwrap();
+            let ratio = output.times(&exact(4, 1)).unwrap().over(&pfd.hz()).unwrap();
+            let word = nearest(ratio, &ModulusRule::Step(step), pfd, 4).unwrap();
+            assert_eq!(word.modulus.get(), 576);
+            // 433 MHz is 51,960 steps, so the raster lies on the grid of the step.
+            assert_eq!(word.ratio(), ratio, "channel {i}");
+            let (k, m) = word.reduced();
+            assert_eq!(num_integer::gcd(k, m), 1);
+        }
+    }
+
+    #[test]
     fn refuses_what_is_no_ratio() {
         let pfd = Frequency::from_whole_hz(1);
         let found = nearest(Exact::ZERO, &fixed(4), pfd, 1).unwrap_err().to_string();
