@@ -122,6 +122,7 @@ mod tests {
 
     #[test]
     fn mismatch_levels_at_two_per_cent() {
+        let mismatch = |p: f64| p + 0.01 * p.abs();
         // CHECKS "Spectra and tones" and PHYSICS §12, to more digits: computed by an independent numpy quadrature of the
         // truncated-power density. (The table prints −63.00 and −68.01 for −63.007 and −68.005.)
         let cases: [(u8, [f64; 3]); 4] = [
