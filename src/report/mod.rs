@@ -1,1 +1,90 @@
-//! (to be filled)
+//! The report set: pure bytes from one survey result, and the one place that writes them to a folder.
+
+mod columns;
+mod document;
+mod error;
+mod figures;
+mod json;
+mod survey_json;
+mod write;
+
+pub use columns::{COLUMNS, Cell, Column, channels_csv};
+pub use error::ReportError;
+pub use json::json_text;
+pub use survey_json::survey_json;
+pub use write::write_set;
+
+use serde::Serialize;
+
+use crate::survey::SurveyResult;
+
+/// The file that marks a folder as ours; its lines after the first name the files of the set.
+pub const MARKER: &str = ".thornmap-report";
+
+/// First line of the marker file.
+pub(crate) const MARKER_HEAD: &str = "thornmap report set 1";
+
+/// Which channels `survey.json` lists.
+#[derive(Debug, Clone, Copy, PartialEq, Eq, Default, Serialize)]
+#[serde(rename_all = "lowercase")]
+pub enum Detail {
+    /// Every channel.
+    #[default]
+    All,
+    /// Only bad and marginal channels.
+    Flagged,
+}
+
+/// What a caller may choose about a report set.
+#[derive(Debug, Clone, Copy, PartialEq, Eq, Default)]
+pub struct RenderOptions {
+    /// Which channels `survey.json` lists.
+    pub detail: Detail,
+}
+
+/// One file of a report set.
+#[derive(Debug, Clone, PartialEq, Eq)]
+pub struct ReportFile {
+    /// Path inside the set, with `/` between its parts.
+    pub path: String,
+    /// The whole content.
+    pub bytes: Vec<u8>,
+}
+
+/// Every file of a report set, in a fixed order; nothing is on disk yet.
+#[derive(Debug, Clone, PartialEq, Eq)]
+pub struct ReportSet {
+    /// The files.
+    pub files: Vec<ReportFile>,
+}
+
+impl ReportSet {
+    /// Returns the content of a file of the set, or `None` when the set has no such file.
+    #[must_use]
+    pub fn get(&self, path: &str) -> Option<&[u8]> {
+        self.files.iter().find(|file| file.path == path).map(|file| file.bytes.as_slice())
+    }
+}
+
+/// Returns the report set of a survey: `report.html`, `channels.csv`, `survey.json`, `plots/*.svg` and the marker.
+///
+/// The same result gives the same bytes on every machine: no clock, no hash order, rounded figures.
+///
+/// # Errors
+/// `NotFinite` where a figure is NaN or infinite, with its key; `Serialize`, `Csv`, `Plot` and `Page` where a writer
+/// itself fails.
+pub fn render(result: &SurveyResult, options: &RenderOptions) -> Result<ReportSet, ReportError> {
+    let mut files = vec![
+        ReportFile { path: "survey.json".into(), bytes: survey_json(result, options)?.into_bytes() },
+        ReportFile { path: "channels.csv".into(), bytes: channels_csv(&result.channels)? },
+    ];
+    files.extend(document::document(result, options)?);
+    files.sort_by(|a, b| a.path.cmp(&b.path));
+    let mut marker = format!("{MARKER_HEAD}\n");
+    for file in &files {
+        marker.push_str(&file.path);
+        marker.push('\n');
+    }
+    files.push(ReportFile { path: MARKER.into(), bytes: marker.into_bytes() });
+    Ok(ReportSet { files })
+}

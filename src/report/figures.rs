@@ -1,0 +1,144 @@
+//! Figures as text: the rounding that makes machines agree, and the forms that readers see.
+
+use super::ReportError;
+
+/// Keys of frequencies that come from exact arithmetic: every machine finds the same double, so none is rounded.
+const EXACT_KEYS: [&str; 13] = [
+    "channel_hz",
+    "injection_hz",
+    "output_hz",
+    "achieved_hz",
+    "error_hz",
+    "error_ppb",
+    "vco_hz",
+    "reference_hz",
+    "pfd_hz",
+    "offset_hz",
+    "tone_offset_hz",
+    "vco_distance_hz",
+    "worst_offset_hz",
+];
+
+/// Significant digits of a figure that is neither a level nor exact.
+pub(crate) const SIGNIFICANT_DIGITS: usize = 10;
+
+/// Decimals of a figure in decibels.
+pub(crate) const DECIBEL_DECIMALS: usize = 4;
+
+/// Returns a figure as JSON and CSV write it, rounded by the unit that its key names.
+///
+/// Decibels: 4 decimals. Exact frequencies: the nearest double in full. Everything else: 10 significant digits.
+///
+/// # Errors
+/// `NotFinite` for NaN and infinities.
+pub(crate) fn figure_text(key: &str, value: f64) -> Result<String, ReportError> {
+    if !value.is_finite() {
+        return Err(ReportError::NotFinite { key: key.to_owned(), found: value });
+    }
+    let rounded = if key.ends_with("_db") || key.ends_with("_dbc") || key.ends_with("_dbc_per_hz") {
+        format!("{value:.DECIBEL_DECIMALS$}").parse()
+    } else if EXACT_KEYS.contains(&key.strip_prefix("boundary_").unwrap_or(key)) {
+        Ok(value)
+    } else {
+        format!("{value:.*e}", SIGNIFICANT_DIGITS - 1).parse()
+    };
+    // A finite number printed by Rust is read back by Rust.
+    Ok(shortest(rounded.unwrap_or(value)))
+}
+
+/// Returns the shortest decimal that reads back as the same double; zero has no sign.
+fn shortest(value: f64) -> String {
+    if value == 0.0 {
+        "0".to_owned()
+    } else if (1e-5..1e16).contains(&value.abs()) {
+        format!("{value}")
+    } else {
+        format!("{value:e}")
+    }
+}
+
+/// Returns a number with a true minus sign, for readers.
+pub(crate) fn signed(text: &str) -> String {
+    text.replace('-', "\u{2212}")
+}
+
+/// Returns a level or margin for readers, two decimals: `−56.38`.
+pub(crate) fn decibel(value: f64) -> String {
+    let text = format!("{value:.2}");
+    signed(if text == "-0.00" { "0.00" } else { &text })
+}
+
+/// Returns a figure for readers with so many significant digits and no trailing zeros.
+pub(crate) fn significant(value: f64, digits: usize) -> String {
+    let rounded = format!("{value:.*e}", digits.max(1) - 1).parse().unwrap_or(value);
+    signed(&shortest(rounded))
+}
+
+/// Returns a figure with the SI prefix that brings it to 1 … 999: `12.5 kHz`.
+pub(crate) fn with_prefix(value: f64, unit: &str, digits: usize) -> String {
+    const PREFIXES: [(f64, &str); 8] =
+        [(1e9, "G"), (1e6, "M"), (1e3, "k"), (1.0, ""), (1e-3, "m"), (1e-6, "µ"), (1e-9, "n"), (1e-12, "p")];
+    if value == 0.0 {
+        return format!("0 {unit}");
+    }
+    // The prefix is chosen after rounding, so that 999.9996 Hz with six digits is 1 kHz and not 1000 Hz.
+    let rounded: f64 = format!("{value:.*e}", digits.max(1) - 1).parse().unwrap_or(value);
+    let (scale, prefix) =
+        PREFIXES.into_iter().find(|(scale, _)| rounded.abs() >= *scale).unwrap_or((1e-12, "p"));
+    format!("{} {prefix}{unit}", significant(rounded / scale, digits))
+}
+
+/// Returns a count with thin spaces between thousands.
+pub(crate) fn count(value: u64) -> String {
+    let digits = value.to_string();
+    let mut text = String::with_capacity(digits.len() + digits.len() / 3 * 3);
+    for (position, digit) in digits.chars().enumerate() {
+        if position > 0 && (digits.len() - position) % 3 == 0 {
+            text.push('\u{202f}');
+        }
+        text.push(digit);
+    }
+    text
+}
+
+#[cfg(test)]
+mod tests {
+    use super::*;
+
+    #[test]
+    fn rounds_by_the_unit_in_the_key() {
+        let cases = [
+            ("level_dbc", -56.380_012_34, "-56.38"),
+            ("margin_db", -0.000_01, "0"),
+            ("phase_error_deg", 0.123_456_789_012_3, "0.123456789"),
+            ("channel_hz", 433_333_333.333_333_3, "433333333.3333333"),
+            ("boundary_tone_offset_hz", 66_666.666_666_666_67, "66666.66666666667"),
+            ("jitter_s", 1.234_567_890_12e-12, "1.23456789e-12"),
+            ("unity_gain_hz", 61_234.567_890_123, "61234.56789"),
+            ("anything", 1e30, "1e30"),
+        ];
+        for (key, value, text) in cases {
+            assert_eq!(figure_text(key, value).unwrap(), text, "{key}");
+        }
+    }
+
+    #[test]
+    fn refuses_what_is_not_finite() {
+        for value in [f64::NAN, f64::INFINITY, f64::NEG_INFINITY] {
+            assert!(matches!(figure_text("level_dbc", value), Err(ReportError::NotFinite { key, .. }) if key == "level_dbc"));
+        }
+    }
+
+    #[test]
+    fn shows_readers_units_and_signs() {
+        assert_eq!(with_prefix(12_500.0, "Hz", 6), "12.5 kHz");
+        assert_eq!(with_prefix(999.9999, "Hz", 6), "1 kHz");
+        assert_eq!(with_prefix(-4.5e6, "Hz", 6), "−4.5 MHz");
+        assert_eq!(with_prefix(0.0, "Hz", 6), "0 Hz");
+        assert_eq!(with_prefix(2.2e-9, "F", 4), "2.2 nF");
+        assert_eq!(decibel(-0.001), "0.00");
+        assert_eq!(decibel(-56.375_1), "−56.38");
+        assert_eq!(count(1_234_567), "1\u{202f}234\u{202f}567");
+        assert_eq!(count(999), "999");
+    }
+}

@@ -1,0 +1,71 @@
+//! `survey.json`: every key that other programs may rely on, in one fixed order.
+
+use std::collections::BTreeMap;
+
+use serde::{Serialize, Serializer};
+
+use super::json::json_text;
+use super::{Detail, RenderOptions, ReportError};
+use crate::assess::{ChannelResult, Verdict};
+use crate::survey::SurveyResult;
+
+/// Name and number of the layout; a renamed or re-unitised key raises the number.
+pub(crate) const SCHEMA: &str = "thornmap.survey/1";
+
+/// Returns whether a channel is listed at this detail.
+pub(crate) fn listed(channel: &ChannelResult, detail: Detail) -> bool {
+    match detail {
+        Detail::All => true,
+        Detail::Flagged => channel.verdict != Verdict::Clear,
+    }
+}
+
+/// Pairs written as an object in their own order.
+struct Pairs<'a>(&'a [(&'static str, &'static str)]);
+
+impl Serialize for Pairs<'_> {
+    fn serialize<S: Serializer>(&self, serializer: S) -> Result<S::Ok, S::Error> {
+        serializer.collect_map(self.0.iter().map(|(name, sentence)| (name, sentence)))
+    }
+}
+
+/// Returns the text of `survey.json`: one line for each top-level key, one for each channel.
+///
+/// # Errors
+/// `NotFinite` with the key of a NaN or an infinity; `Serialize` for what JSON cannot express.
+pub fn survey_json(result: &SurveyResult, options: &RenderOptions) -> Result<String, ReportError> {
+    let omitted = result.channels.iter().filter(|channel| !listed(channel, options.detail)).count();
+    let mut out = String::from("{\n");
+    let mut line = |key: &str, text: String| {
+        out.push_str(&format!("\"{key}\": {text},\n"));
+    };
+    line("schema", json_text("schema", SCHEMA)?);
+    line("version", json_text("version", env!("CARGO_PKG_VERSION"))?);
+    line("plan_sha256", json_text("plan_sha256", &result.plan.sha256)?);
+    line("plan", json_text("plan", &result.plan)?);
+    line("conventions", json_text("conventions", &Pairs(&result.conventions))?);
+    line("detail", json_text("detail", &options.detail)?);
+    line("channels_omitted", json_text("channels_omitted", &omitted)?);
+    line("assumptions", json_text("assumptions", &result.assumptions)?);
+    line("loop", json_text("loop", &result.loop_summary)?);
+    line("summary", json_text("summary", &complete_summary(result))?);
+    line("method_check", json_text("method_check", &result.method_check)?);
+    let mut rows = Vec::new();
+    for channel in result.channels.iter().filter(|channel| listed(channel, options.detail)) {
+        rows.push(json_text("channels", channel)?);
+    }
+    line("channels", if rows.is_empty() { "[]".to_owned() } else { format!("[\n{}\n]", rows.join(",\n")) });
+    out.push_str(&format!("\"warnings\": {}\n}}\n", json_text("warnings", &result.warnings)?));
+    Ok(out)
+}
+
+/// Returns the summary with an entry for every rule, so that a rule that never fired reads 0 and is not missing.
+fn complete_summary(result: &SurveyResult) -> crate::survey::Summary {
+    let mut summary = result.summary.clone();
+    let fired = std::mem::take(&mut summary.reasons);
+    summary.reasons = crate::assess::Rule::ALL
+        .into_iter()
+        .map(|rule| (rule, fired.get(&rule).copied().unwrap_or(0)))
+        .collect::<BTreeMap<_, _>>();
+    summary
+}
