@@ -1,5 +1,8 @@
 //! One channel, all stages: the one place that calls them.
 
+mod candidate;
+mod lines;
+mod listing;
 mod placement;
 mod result;
 mod verdict;

@@ -149,6 +149,13 @@ impl ModulatorConfig {
         Self { seeds: seeds.to_vec(), ..self.clone() }
     }
 
+    /// Returns whether the quantisation error leaves through (1 − z⁻¹)^order, so that the shaping formula and the
+    /// conditional-mean curve describe it.
+    #[must_use]
+    pub fn has_ideal_shaping(&self) -> bool {
+        !self.held && self.shaping == Shaping::Difference
+    }
+
     /// Returns whether the noise transfer is (1 − z⁻¹)^order or was given.
     pub(super) fn shaping(&self) -> Shaping {
         self.shaping

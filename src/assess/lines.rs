@@ -1,0 +1,316 @@
+//! Lines of the modulator family before the loop: from one exact period where it fits, else from the shared curve.
+
+use num_complex::Complex64;
+use num_traits::ToPrimitive;
+
+use crate::modulator::{ModulatorConfig, ModulatorError, Period, phase_numerators, start, transient};
+use crate::spectrum::{FftScratch, FftStage, Window, correlate_each};
+use crate::tones::{
+    Charge, CurveError, CurveLine, FamilyTone, FoldedNoise, LONGEST_LATTICE, PhaseDensity, PhaseLattice, folded_noise,
+    harmonic, harmonic_on_lattice, lattice_is_short, level_uncertainty_db, line_noise_cycles2, settle,
+    settle_on_lattice, settle_samples,
+};
+
+use super::result::Method;
+
+/// Buffers of one worker; they grow to the record length once.
+#[derive(Debug, Default)]
+pub struct Scratch {
+    fft: FftScratch,
+    outputs: Vec<i32>,
+    numerators: Vec<i64>,
+    phase_cycles: Vec<f64>,
+    excess_cycles: Vec<f64>,
+}
+
+/// One line before the loop \[cycles\].
+#[derive(Debug, Clone, Copy, PartialEq)]
+pub struct Line {
+    /// Line of ψ.
+    pub modulator: Complex64,
+    /// Line of g(ψ + a) − ψ; `None` when the charge curve is unknown.
+    pub nonlinearity: Option<Complex64>,
+    /// Half width of the uncertainty from the method \[dB\]; `None` where the line does not stand above its noise.
+    pub uncertainty_db: Option<f64>,
+}
+
+/// A line of the exact period that is no multiple of K/M.
+#[derive(Debug, Clone, Copy, PartialEq)]
+pub struct PeriodLine {
+    /// Position k of the line at k·f_pfd/T.
+    pub bin: u64,
+    /// The line.
+    pub line: Line,
+}
+
+/// All lines of a channel's modulator.
+#[derive(Debug, Clone)]
+pub struct FamilyLines {
+    /// How they were found.
+    pub method: Method,
+    /// Lines in the order of the family.
+    pub family: Vec<Line>,
+    /// Every other line of an exact period, rising in `bin`; empty for longer sequences.
+    pub others: Vec<PeriodLine>,
+    /// T of an exact period.
+    pub period: Option<u64>,
+    /// Noise that the nonlinearity folds into the loop, for sequences that are no exact period.
+    pub folded: Option<FoldedNoise>,
+    /// Largest difference between a cut record and the curve, over the lines that stand above the record's noise \[dB\].
+    pub record_difference_db: Option<f64>,
+}
+
+/// Why the lines of a channel cannot be computed.
+#[derive(Debug, Clone, PartialEq, thiserror::Error)]
+pub enum LinesError {
+    /// The loop cannot rest, or an order has no curve.
+    #[error(transparent)]
+    Curve(#[from] CurveError),
+    /// The sequence leaves its range.
+    #[error(transparent)]
+    Modulator(#[from] ModulatorError),
+}
+
+/// What the lines of one channel depend on.
+#[derive(Clone, Copy)]
+pub struct LineInput<'a> {
+    /// The modulator with its word.
+    pub modulator: &'a ModulatorConfig,
+    /// Length of its sequence.
+    pub period: &'a Period,
+    /// The tones asked for.
+    pub family: &'a [FamilyTone],
+    /// Charge curve in cycles; `None` is unknown.
+    pub charge: Option<Charge<'a>>,
+    /// Charge that the loop must supply each cycle, φ_0 \[cycles\].
+    pub target_cycles: f64,
+    /// Longest period that is transformed whole, and the length of a cut record.
+    pub record: u64,
+    /// PFD frequency \[Hz\].
+    pub pfd_hz: f64,
+}
+
+impl Scratch {
+    /// Runs the modulator from its start and leaves ψ of `length` cycles after the transient in `phase_cycles`.
+    fn run(&mut self, config: &ModulatorConfig, length: usize) -> Result<(), ModulatorError> {
+        let skipped = transient(config);
+        let total = skipped + length;
+        self.outputs.resize(total, 0);
+        self.numerators.resize(total, 0);
+        start(config).fill(&mut self.outputs);
+        phase_numerators(&self.outputs, config.k(), config.modulus(), &mut self.numerators)?;
+        let scale = 1.0 / config.modulus().get() as f64;
+        let drift = config.mean_shift().to_f64();
+        self.phase_cycles.clear();
+        self.phase_cycles.extend(self.numerators[skipped..].iter().enumerate().map(|(n, numerator)| {
+            // Dither at the first stage moves the mean: φ is counted from the shifted one.
+            *numerator as f64 * scale - drift * n as f64
+        }));
+        let mean = self.phase_cycles.iter().sum::<f64>() / length as f64;
+        self.phase_cycles.iter_mut().for_each(|phase| *phase -= mean);
+        Ok(())
+    }
+
+    /// Leaves g(ψ + a) − ψ in `excess_cycles`.
+    fn bend(&mut self, charge: Charge<'_>, offset_cycles: f64) {
+        self.excess_cycles.clear();
+        self.excess_cycles.extend(self.phase_cycles.iter().map(|phase| charge.at(phase + offset_cycles) - phase));
+    }
+}
+
+/// Returns the lines of a channel.
+///
+/// # Errors
+/// `LinesError` where the loop cannot rest on the charge curve or the sequence leaves its range.
+pub fn family_lines(input: &LineInput, fft: &FftStage, scratch: &mut Scratch) -> Result<FamilyLines, LinesError> {
+    let whole = input.period.length.as_ref().and_then(ToPrimitive::to_u64).filter(|length| *length <= input.record);
+    match whole {
+        Some(length) if input.period.is_exact => exact_lines(input, length, fft, scratch),
+        _ if input.modulator.has_ideal_shaping() => curve_lines(input, scratch),
+        _ => windowed_lines(input, scratch),
+    }
+}
+
+/// One DFT over one exact period.
+fn exact_lines(
+    input: &LineInput,
+    period: u64,
+    fft: &FftStage,
+    scratch: &mut Scratch,
+) -> Result<FamilyLines, LinesError> {
+    let length = usize::try_from(period).map_err(|_| CurveError::NoSamples)?;
+    scratch.run(input.modulator, length)?;
+    let phase = fft.lines(&scratch.phase_cycles, &mut scratch.fft);
+    let excess = match input.charge {
+        None => None,
+        Some(charge) => {
+            let rest = settle_samples(&scratch.phase_cycles, charge, input.target_cycles)?;
+            scratch.bend(charge, rest.offset_cycles);
+            Some(fft.lines(&scratch.excess_cycles, &mut scratch.fft))
+        }
+    };
+    let line_at = |bin: usize| Line {
+        modulator: phase[bin],
+        nonlinearity: excess.as_ref().map(|lines| lines[bin]),
+        uncertainty_db: Some(0.0),
+    };
+    let m = input.modulator.modulus().get();
+    let mut is_family = vec![false; phase.len()];
+    let mut family = Vec::with_capacity(input.family.len());
+    for tone in input.family {
+        // The residue times T/M is an integer: T is a multiple of M/gcd(K, M).
+        let scaled = u128::from(tone.residue.unsigned_abs()) * u128::from(period) / u128::from(m);
+        let bin = usize::try_from(scaled).map_err(|_| CurveError::NoSamples)?;
+        is_family[bin] = true;
+        family.push(line_at(bin));
+    }
+    let others = (1..phase.len())
+        .filter(|bin| !is_family[*bin])
+        .map(|bin| PeriodLine { bin: bin as u64, line: line_at(bin) })
+        .collect();
+    Ok(FamilyLines {
+        method: Method::ExactPeriod,
+        family,
+        others,
+        period: Some(period),
+        folded: None,
+        record_difference_db: None,
+    })
+}
+
+/// Levels from the conditional mean of the charge given the first residue, checked by a cut record.
+fn curve_lines(input: &LineInput, scratch: &mut Scratch) -> Result<FamilyLines, LinesError> {
+    let density = PhaseDensity::mash(input.modulator.order())?;
+    let linear = |p: f64| p;
+    let charge = input.charge.unwrap_or_else(|| Charge::new(&linear, &[]));
+    let reduced =
+        input.modulator.modulus().get() / num_integer::gcd(input.modulator.k(), input.modulator.modulus().get());
+    let highest = input.family.iter().map(|tone| tone.harmonic).max().unwrap_or(1);
+    let lattice = (lattice_is_short(reduced, highest) && reduced <= LONGEST_LATTICE)
+        .then(|| PhaseLattice::new(&density, reduced, lattice_start(input.modulator)))
+        .transpose()?;
+    let rest = match &lattice {
+        Some(lattice) => settle_on_lattice(lattice, charge, input.target_cycles)?,
+        None => settle(&density, charge, input.target_cycles)?,
+    };
+    let folded = input.charge.map(|charge| folded_noise(&density, charge, rest.offset_cycles));
+    let folded_cycles2 = folded.as_ref().map_or(0.0, |noise| noise.density_cycles2);
+    let period = input.period.length.as_ref().and_then(ToPrimitive::to_f64);
+    let mut family: Vec<Line> = input
+        .family
+        .iter()
+        .map(|tone| {
+            let CurveLine { modulator, nonlinearity } = match &lattice {
+                Some(lattice) => harmonic_on_lattice(lattice, charge, rest.offset_cycles, tone.harmonic),
+                None => harmonic(&density, charge, rest.offset_cycles, tone.harmonic),
+            };
+            let size = (modulator + nonlinearity).norm();
+            let noise = |cycles| line_noise_of(input, folded_cycles2, tone, cycles);
+            Line {
+                modulator,
+                nonlinearity: input.charge.map(|_| nonlinearity),
+                // Without a known period the sequence is taken as long: its own noise is spread ever thinner.
+                uncertainty_db: period.map_or(Some(0.0), |cycles| level_uncertainty_db(size, noise(cycles))),
+            }
+        })
+        .collect();
+    let record_difference_db =
+        check_by_record(input, charge, rest.offset_cycles, folded_cycles2, &mut family, scratch)?;
+    Ok(FamilyLines {
+        method: Method::SharedCurve,
+        family,
+        others: Vec::new(),
+        period: None,
+        folded,
+        record_difference_db,
+    })
+}
+
+/// Returns (s_1(0) mod gcd(K, M))/M: where the lattice of the first residue begins.
+fn lattice_start(config: &ModulatorConfig) -> f64 {
+    let m = config.modulus().get();
+    let shared = num_integer::gcd(config.k(), m);
+    let seed = config.seeds().first().copied().unwrap_or(0);
+    (seed % shared) as f64 / m as f64
+}
+
+/// Returns the noise power on one line of a sequence of `cycles` \[cycles²\].
+fn line_noise_of(input: &LineInput, folded_cycles2: f64, tone: &FamilyTone, cycles: f64) -> f64 {
+    let share = tone.residue.unsigned_abs() as f64 / input.modulator.modulus().get() as f64;
+    line_noise_cycles2(folded_cycles2, input.modulator.order(), share * input.pfd_hz, input.pfd_hz, cycles)
+}
+
+/// Compares each line with the direct correlation over a cut record; where the two differ by more than the record's
+/// own noise explains, the difference becomes the line's uncertainty. Returns the largest such comparison.
+fn check_by_record(
+    input: &LineInput,
+    charge: Charge<'_>,
+    offset_cycles: f64,
+    folded_cycles2: f64,
+    family: &mut [Line],
+    scratch: &mut Scratch,
+) -> Result<Option<f64>, LinesError> {
+    if family.is_empty() {
+        return Ok(None);
+    }
+    let length = usize::try_from(input.record).map_err(|_| CurveError::NoSamples)?;
+    scratch.run(input.modulator, length)?;
+    scratch.bend(charge, offset_cycles);
+    // The sum of both parts, so that one correlation serves.
+    let bent: Vec<f64> = scratch.excess_cycles.iter().zip(&scratch.phase_cycles).map(|(e, p)| e + p).collect();
+    let window = Window::FourTerm;
+    let residues: Vec<u64> = input.family.iter().map(|tone| tone.residue.unsigned_abs()).collect();
+    let seen = correlate_each(&bent, &residues, input.modulator.modulus().get(), window);
+    let mut worst: Option<f64> = None;
+    for ((line, tone), found) in family.iter_mut().zip(input.family).zip(seen) {
+        let expected = (line.modulator + line.nonlinearity.unwrap_or_default()).norm();
+        let effective = input.record as f64 / window.noise_bandwidth_bins();
+        let noise = line_noise_of(input, folded_cycles2, tone, effective);
+        let Some(scatter_db) = level_uncertainty_db(expected, noise) else { continue };
+        if found.norm() == 0.0 {
+            continue;
+        }
+        let ratio = found.norm() / expected;
+        let difference_db = crate::base::db_from_power(ratio * ratio).abs();
+        worst = Some(worst.map_or(difference_db, |known| known.max(difference_db)));
+        if difference_db > scatter_db {
+            line.uncertainty_db = line.uncertainty_db.map(|known| known.max(difference_db));
+        }
+    }
+    Ok(worst)
+}
+
+/// Levels from a windowed record alone: for noise transfers that have no curve.
+fn windowed_lines(input: &LineInput, scratch: &mut Scratch) -> Result<FamilyLines, LinesError> {
+    let length = usize::try_from(input.record).map_err(|_| CurveError::NoSamples)?;
+    scratch.run(input.modulator, length)?;
+    let window = Window::FourTerm;
+    let residues: Vec<u64> = input.family.iter().map(|tone| tone.residue.unsigned_abs()).collect();
+    let m = input.modulator.modulus().get();
+    let phase = correlate_each(&scratch.phase_cycles, &residues, m, window);
+    let excess = match input.charge {
+        None => None,
+        Some(charge) => {
+            let rest = settle_samples(&scratch.phase_cycles, charge, input.target_cycles)?;
+            scratch.bend(charge, rest.offset_cycles);
+            Some(correlate_each(&scratch.excess_cycles, &residues, m, window))
+        }
+    };
+    let family = phase
+        .iter()
+        .enumerate()
+        .map(|(index, modulator)| Line {
+            modulator: *modulator,
+            nonlinearity: excess.as_ref().map(|lines| lines[index]),
+            uncertainty_db: None,
+        })
+        .collect();
+    Ok(FamilyLines {
+        method: Method::Windowed,
+        family,
+        others: Vec::new(),
+        period: None,
+        folded: None,
+        record_difference_db: None,
+    })
+}
