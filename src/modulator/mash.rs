@@ -10,22 +10,12 @@ use super::checked::ModulatorConfig;
 use super::config::Dither;
 use super::sequence::Modulator;
 
-/// Neighbouring outputs that advance together: two or four machine vectors, and more than the highest order.
-const LANES: usize = 16;
+/// Neighbouring outputs that advance together: two or four machine vectors, and no fewer than the highest order.
+const LANES: usize = 8;
 /// Values between two passes: stays in the first-level cache.
 const BLOCK: usize = 1024;
 /// Places before a block for the values that the difference of the highest order reaches back to.
 const HISTORY: usize = 5;
-
-/// (−1)^j·C(order, j) in row `order`: the taps of Δ^order.
-const DIFFERENCE: [[i32; HISTORY + 1]; HISTORY + 1] = [
-    [1, 0, 0, 0, 0, 0],
-    [1, -1, 0, 0, 0, 0],
-    [1, -2, 1, 0, 0, 0],
-    [1, -3, 3, -1, 0, 0],
-    [1, -4, 6, -4, 1, 0],
-    [1, -5, 10, -10, 5, -1],
-];
 
 /// Starts a MASH.
 pub(super) fn start(config: &ModulatorConfig) -> Box<dyn Modulator + Send> {
@@ -64,7 +54,6 @@ trait Accumulator: Copy + Send + Default + 'static {
     fn widen(self) -> u64;
     fn plus(self, other: Self) -> Self;
     fn minus(self, other: Self) -> Self;
-    fn times(self, factor: i32) -> Self;
     /// Returns the part above the modulus.
     fn above(self, bits: u32) -> Self;
     /// Returns a small signed number of which only the bits that `above` leaves are right.
@@ -97,10 +86,6 @@ macro_rules! accumulator {
                 self.wrapping_sub(other)
             }
             #[inline(always)]
-            fn times(self, factor: i32) -> Self {
-                self.wrapping_mul(factor as $word)
-            }
-            #[inline(always)]
             fn above(self, bits: u32) -> Self {
                 self >> bits
             }
@@ -113,6 +98,60 @@ macro_rules! accumulator {
 }
 accumulator!(u32, i32);
 accumulator!(u64, i64);
+
+/// Returns Δ^order at v\[0\], where v\[j\] is j places back: Σ (−1)^j·C(order, j)·v\[j\], by additions only, which every
+/// machine vector has.
+#[inline(always)]
+fn difference<const ORDER: usize, A: Accumulator>(v: [A; HISTORY + 1]) -> A {
+    let twice = |x: A| x.plus(x);
+    match ORDER {
+        1 => v[0].minus(v[1]),
+        2 => v[0].minus(v[1]).minus(v[1].minus(v[2])),
+        3 => {
+            let inner = v[1].minus(v[2]);
+            v[0].minus(v[3]).minus(inner.plus(twice(inner)))
+        }
+        4 => {
+            let (outer, middle) = (v[0].plus(v[4]), twice(v[2]));
+            outer.minus(twice(twice(v[1].plus(v[3])))).plus(middle).plus(twice(middle))
+        }
+        5 => {
+            let (outer, middle, inner) = (v[0].minus(v[5]), v[1].minus(v[4]), twice(v[2].minus(v[3])));
+            outer.minus(middle).minus(twice(twice(middle))).plus(inner).plus(twice(twice(inner)))
+        }
+        other => unreachable!("a MASH has order 1 … 5, not {other}"),
+    }
+}
+
+/// The next `LANES` values of S_m and their differences of stride `LANES`; the last row is constant.
+#[derive(Clone, Copy)]
+struct Strides<const ORDER: usize, A> {
+    values: [A; LANES],
+    steps: [[A; LANES]; ORDER],
+}
+
+impl<const ORDER: usize, A: Accumulator> Strides<ORDER, A> {
+    /// Writes the parts above the modulus, `LANES` at a time, and moves on.
+    #[inline(always)]
+    fn write(&mut self, targets: &mut [A], bits: u32) {
+        // A local copy keeps the rows in machine registers.
+        let mut local = *self;
+        for target in targets.chunks_exact_mut(LANES) {
+            for (place, value) in target.iter_mut().zip(local.values) {
+                *place = value.above(bits);
+            }
+            for lane in 0..LANES {
+                local.values[lane] = local.values[lane].plus(local.steps[0][lane]);
+            }
+            for row in 1..ORDER {
+                for lane in 0..LANES {
+                    local.steps[row - 1][lane] = local.steps[row - 1][lane].plus(local.steps[row][lane]);
+                }
+            }
+        }
+        *self = local;
+    }
+}
 
 /// A MASH with M = 2^bits and accumulators that run past M.
 struct Unwrapped<const ORDER: usize, A> {
@@ -150,25 +189,28 @@ impl<const ORDER: usize, A: Accumulator> Unwrapped<ORDER, A> {
         sums[0] = sums[0].minus(self.k);
     }
 
-    /// Returns the differences of stride `LANES` of the next `LANES` values of S_m: row 0 the values, row m constant.
-    fn table(&self, sums: &[A; ORDER]) -> [[A; LANES]; HISTORY + 1] {
-        let mut table = [[A::default(); LANES]; HISTORY + 1];
+    /// Returns the differences that follow given sums.
+    fn strides(&self, sums: &[A; ORDER]) -> Strides<ORDER, A> {
         let mut sums = *sums;
-        for row in table.iter_mut().take(ORDER + 1) {
-            for value in row {
+        let mut vector = || {
+            std::array::from_fn(|_| {
                 self.forward(&mut sums);
-                *value = sums[ORDER - 1];
-            }
+                sums[ORDER - 1]
+            })
+        };
+        let mut strides = Strides { values: vector(), steps: [[A::default(); LANES]; ORDER] };
+        for row in &mut strides.steps {
+            *row = vector();
         }
-        for level in 1..=ORDER {
-            for row in (level..=ORDER).rev() {
-                let (below, above) = table.split_at_mut(row);
-                for (value, earlier) in above[0].iter_mut().zip(&below[row - 1]) {
-                    *value = value.minus(*earlier);
+        for level in 0..ORDER {
+            for row in (level..ORDER).rev() {
+                let earlier = if row == 0 { strides.values } else { strides.steps[row - 1] };
+                for (value, earlier) in strides.steps[row].iter_mut().zip(earlier) {
+                    *value = value.minus(earlier);
                 }
             }
         }
-        table
+        strides
     }
 
     /// Fills outputs once the start-up is over.
@@ -177,7 +219,7 @@ impl<const ORDER: usize, A: Accumulator> Unwrapped<ORDER, A> {
             return;
         }
         let mut sums = self.plain.stages.map(|stage| A::keep(stage.residue));
-        let mut table = self.table(&sums);
+        let mut strides = self.strides(&sums);
         // buffer[HISTORY − 1] is ⌊S_m/M⌋ after the last output made, the places before go further back.
         let mut buffer = [A::default(); HISTORY + BLOCK];
         for place in (0..HISTORY).rev() {
@@ -187,22 +229,12 @@ impl<const ORDER: usize, A: Accumulator> Unwrapped<ORDER, A> {
         let mut unused = 0;
         for block in outputs.chunks_mut(BLOCK) {
             let vectors = block.len().div_ceil(LANES);
-            for target in buffer[HISTORY..].chunks_exact_mut(LANES).take(vectors) {
-                for (value, sum) in target.iter_mut().zip(&table[0]) {
-                    *value = sum.above(self.bits);
-                }
-                for row in 0..ORDER {
-                    let (low, high) = table.split_at_mut(row + 1);
-                    for (value, step) in low[row].iter_mut().zip(&high[0]) {
-                        *value = value.plus(*step);
-                    }
-                }
-            }
+            strides.write(&mut buffer[HISTORY..HISTORY + vectors * LANES], self.bits);
             self.combine(&buffer, block);
             buffer.copy_within(block.len()..block.len() + HISTORY, 0);
             unused = vectors * LANES - block.len();
         }
-        self.keep_residues(&table[0], unused);
+        self.keep_residues(&strides.values, unused);
     }
 
     /// Writes Δ^m of the buffer as outputs.
@@ -211,11 +243,7 @@ impl<const ORDER: usize, A: Accumulator> Unwrapped<ORDER, A> {
         let len = block.len();
         let rows: [&[A]; HISTORY + 1] = std::array::from_fn(|j| &buffer[HISTORY - j..HISTORY - j + len]);
         for (i, output) in block.iter_mut().enumerate() {
-            let mut sum = rows[0][i];
-            for j in 1..=ORDER {
-                sum = sum.plus(rows[j][i].times(DIFFERENCE[ORDER][j]));
-            }
-            *output = sum.signed(self.bits);
+            *output = difference::<ORDER, A>(rows.map(|row| row[i])).signed(self.bits);
         }
     }
 

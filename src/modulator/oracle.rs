@@ -1,6 +1,12 @@
 //! The slow definition: recurrences as they are written, in 128 bits, with no shortcut shared with the engine.
 //!
-//! Every fast path is tested against this. Source: Thornmap's statement of the structures (README, "Modulators").
+//! Every fast path is tested against this. With in_1 = K and dither added at its stage, each cycle does for stage i
+//! - MASH: v = in_i + s_i, c_i = ⌊v/M⌋, s_i = v mod M, in_{i+1} = s_i;
+//! - output-fed: the same with in_{i+1} = s_i + c_i;
+//! - prime-modulus (Hosseini & Kennedy 2007, from memory): v = in_i + s_i + a·c_i\[n − 1\], c_i = ⌊v/2^b⌋,
+//!   s_i = v mod 2^b, a = 2^b − M;
+//!
+//! and y\[n\] = Σ_i (1 − z⁻¹)^(i−1) c_i\[n\]. Error feedback: v = K + Σ h_j·e\[n − j\], y = ⌊v/M⌋, e = v mod M.
 
 use super::checked::ModulatorConfig;
 use super::config::{Dither, Structure};

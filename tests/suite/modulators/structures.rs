@@ -3,8 +3,8 @@
 use num_bigint::BigUint;
 use thornmap::base::Exact;
 use thornmap::modulator::{
-    ModulatorConfig, ModulatorSettings, Modulus, ModulusRule, PeriodBasis, Structure, oracle, output_range, period,
-    period_within, prime_feedback, transient,
+    Dither, ModulatorConfig, ModulatorSettings, Modulus, ModulusRule, PeriodBasis, Structure, oracle, output_range,
+    period, period_within, prime_feedback, start, transient,
 };
 
 use super::{Draw, config_of, mash, run, settings};
@@ -286,4 +286,31 @@ fn working_moduli() {
     for refused in [fixed(30), fixed(4), fixed(29), ModulusRule::Largest(Modulus::new(31).unwrap())] {
         assert!(refused.working(Structure::PrimeMash).is_err(), "{refused:?}");
     }
+}
+
+/// M·φ + s_1 is constant modulo M for every cascade, whatever its order and the dither of later stages.
+#[test]
+fn the_ramp_identity_holds_for_every_cascade() {
+    let mut draw = Draw(14);
+    let mut checked = 0;
+    for structure in [Structure::Mash, Structure::PrimeMash, Structure::OutputFed] {
+        for m in [31u64, 251, (1 << 24) - 3] {
+            for order in 2..=5u8 {
+                let mut chosen = settings(structure, order, &[draw.below(m), draw.below(m)]);
+                chosen.dither = Dither::Register { stage: order, register: 15, seed: 77, weight: 1 };
+                let config = config_of(&chosen, m, draw.below(m));
+                let mut modulator = start(&config);
+                let mut sum = 0i128;
+                for _ in 0..500 {
+                    let mut output = [0];
+                    modulator.fill(&mut output);
+                    sum += i128::from(m) * i128::from(output[0]) - i128::from(config.k());
+                    let ramp = i128::from(modulator.first_residue().unwrap());
+                    assert_eq!((sum + ramp).rem_euclid(m.into()), config.seeds()[0].into(), "{config:?}");
+                }
+                checked += 1;
+            }
+        }
+    }
+    assert_eq!(checked, 36);
 }
