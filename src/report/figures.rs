@@ -83,8 +83,7 @@ pub(crate) fn with_prefix(value: f64, unit: &str, digits: usize) -> String {
     }
     // The prefix is chosen after rounding, so that 999.9996 Hz with six digits is 1 kHz and not 1000 Hz.
     let rounded: f64 = format!("{value:.*e}", digits.max(1) - 1).parse().unwrap_or(value);
-    let (scale, prefix) =
-        PREFIXES.into_iter().find(|(scale, _)| rounded.abs() >= *scale).unwrap_or((1e-12, "p"));
+    let (scale, prefix) = PREFIXES.into_iter().find(|(scale, _)| rounded.abs() >= *scale).unwrap_or((1e-12, "p"));
     format!("{} {prefix}{unit}", significant(rounded / scale, digits))
 }
 
@@ -125,7 +124,9 @@ mod tests {
     #[test]
     fn refuses_what_is_not_finite() {
         for value in [f64::NAN, f64::INFINITY, f64::NEG_INFINITY] {
-            assert!(matches!(figure_text("level_dbc", value), Err(ReportError::NotFinite { key, .. }) if key == "level_dbc"));
+            assert!(
+                matches!(figure_text("level_dbc", value), Err(ReportError::NotFinite { key, .. }) if key == "level_dbc")
+            );
         }
     }
 

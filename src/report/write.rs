@@ -68,10 +68,7 @@ fn refused(path: &Path, action: &'static str, source: io::Error) -> ReportError 
 
 /// Returns a new folder beside the target; it goes away by itself unless it is moved.
 fn sibling(parent: &Path, prefix: &str) -> Result<tempfile::TempDir, ReportError> {
-    tempfile::Builder::new()
-        .prefix(prefix)
-        .tempdir_in(parent)
-        .map_err(|source| refused(parent, "written to", source))
+    tempfile::Builder::new().prefix(prefix).tempdir_in(parent).map_err(|source| refused(parent, "written to", source))
 }
 
 /// Returns the files that the marker of an existing set names; an absent or empty folder has none.
@@ -124,12 +121,7 @@ fn move_in(fresh: tempfile::TempDir, target: &Path) -> Result<(), ReportError> {
 }
 
 /// Removes the old set file by file and moves everything else into the new folder.
-fn carry_over(
-    aside: tempfile::TempDir,
-    old: &Path,
-    target: &Path,
-    old_files: &[PathBuf],
-) -> Result<(), ReportError> {
+fn carry_over(aside: tempfile::TempDir, old: &Path, target: &Path, old_files: &[PathBuf]) -> Result<(), ReportError> {
     for file in old_files {
         // A file that is gone already needs no removal; one that stays is carried over or left below.
         let _ = fs::remove_file(old.join(file));
