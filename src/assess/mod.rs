@@ -1,12 +1,18 @@
 //! One channel, all stages: the one place that calls them.
 
 mod candidate;
+mod channel;
 mod lines;
 mod listing;
+mod noise;
 mod placement;
 mod result;
+mod setup;
 mod verdict;
 
+pub use lines::{FamilyLines, Line, LinesError, PeriodLine, Scratch};
+pub use noise::{ChannelNoise, channel_budget};
 pub use placement::{Placement, PlacementError, place};
 pub use result::{BoundaryNear, ChannelResult, Contributions, Illegal, Method, Origin, Reason, Rule, Tone, Verdict};
+pub use setup::{AssessError, LoopSource, Setup, gain_at};
 pub use verdict::{Evidence, MaskState, judge};

@@ -1,5 +1,21 @@
-//! The loop around the modulator: filter, responses, noise, charge pump.
+//! The loop around the modulator: filter, responses, charge curve, noise.
 
+mod charge;
+mod integral;
+mod network;
+mod noise_budget;
+mod noise_points;
+mod reference_tone;
+mod response;
 mod settings;
 
-pub use settings::{ChargeTable, FilterComponents, FilterDesign, LoopModelError, NoisePoints, ResponseTable};
+pub use charge::{ChargeCurve, ChargeTerms, static_charge_cycles};
+pub use integral::{PhaseFigures, integrate_log_log};
+pub use network::{FilterNetwork, Pole, Resistor};
+pub use noise_budget::{FILTER_TEMPERATURE_K, NoiseBudget, NoiseInput, NoiseSource, log_grid, noise_budget};
+pub use noise_points::{BOLTZMANN_J_PER_K, NoiseRole, detector_flicker_dbc_per_hz, detector_floor_dbc_per_hz};
+pub use reference_tone::{reference_tone_dbc, ripple_tone_dbc};
+pub use response::{LoopPoint, LoopResponse};
+pub use settings::{
+    ChargeTable, FilterComponents, FilterDesign, LoopModelError, NoisePoints, OscillatorNoise, ResponseTable,
+};

@@ -25,29 +25,36 @@ pub enum LoopModelError {
         /// The value.
         found: f64,
     },
+    /// R4–C4 without R3–C3.
+    #[error("a fourth pole (R4, C4) needs the third (R3, C3)")]
+    FourthWithoutThird,
+    /// A phase margin that no filter of this shape gives.
+    #[error("a phase margin of {found_deg} deg is outside 0 … 90 deg, ends excluded")]
+    PhaseMargin {
+        /// The value.
+        found_deg: f64,
+    },
+    /// The sampled loop is unstable.
+    #[error(
+        "the sampled loop is unstable: open-loop gain {found:.3} at half the PFD frequency is not above -1 \
+         (PFD frequency over unity-gain frequency is {ratio:.2}); lower the bandwidth or raise the PFD frequency"
+    )]
+    Unstable {
+        /// f_pfd/f_c.
+        ratio: f64,
+        /// A*(f_pfd/2).
+        found: f64,
+    },
 }
 
 /// Noise against offset: log-log linear between the points.
 #[derive(Debug, Clone, PartialEq, Serialize)]
 pub struct NoisePoints {
     /// (offset \[Hz\] > 0, strictly rising; level \[dBc/Hz\]).
-    points: Vec<(f64, f64)>,
+    pub(super) points: Vec<(f64, f64)>,
 }
 
 impl NoisePoints {
-    /// Returns checked points.
-    ///
-    /// # Errors
-    /// `BadPoints` for an empty list, offsets that are not positive and strictly rising, or values not finite.
-    pub fn new(points: Vec<(f64, f64)>) -> Result<Self, LoopModelError> {
-        let rising = points.windows(2).all(|pair| pair[0].0 < pair[1].0);
-        let usable = points.iter().all(|(offset, level)| offset.is_finite() && *offset > 0.0 && level.is_finite());
-        if points.is_empty() || !rising || !usable {
-            return Err(LoopModelError::BadPoints { what: "a noise curve", least: 1, found: format!("{points:?}") });
-        }
-        Ok(Self { points })
-    }
-
     /// Returns the points.
     #[must_use]
     pub fn points(&self) -> &[(f64, f64)] {
@@ -70,6 +77,33 @@ pub struct FilterComponents {
     pub r4_c4: Option<(f64, f64)>,
 }
 
+impl FilterComponents {
+    /// Checks that every component is positive and finite and that the sections follow each other.
+    ///
+    /// # Errors
+    /// `NotPositive`, `FourthWithoutThird`.
+    pub fn check(&self) -> Result<(), LoopModelError> {
+        let given = [
+            ("R2", Some(self.r2_ohm)),
+            ("C2", Some(self.c2_farad)),
+            ("C1", self.c1_farad),
+            ("R3", self.r3_c3.map(|(ohm, _)| ohm)),
+            ("C3", self.r3_c3.map(|(_, farad)| farad)),
+            ("R4", self.r4_c4.map(|(ohm, _)| ohm)),
+            ("C4", self.r4_c4.map(|(_, farad)| farad)),
+        ];
+        for (what, value) in given {
+            if let Some(found) = value.filter(|found| !(found.is_finite() && *found > 0.0)) {
+                return Err(LoopModelError::NotPositive { what, found });
+            }
+        }
+        if self.r4_c4.is_some() && self.r3_c3.is_none() {
+            return Err(LoopModelError::FourthWithoutThird);
+        }
+        Ok(())
+    }
+}
+
 /// A second-order filter given by what the loop shall do.
 #[derive(Debug, Clone, Copy, PartialEq, Serialize)]
 pub struct FilterDesign {
@@ -81,6 +115,54 @@ pub struct FilterDesign {
     pub design_divider: Option<f64>,
 }
 
+impl FilterDesign {
+    /// Returns the second-order filter that gives this bandwidth and margin at a divider ratio.
+    ///
+    /// `T1 = (sec PM − tan PM)/ω_c`, `T2 = 1/(ω_c²·T1)`,
+    /// `C = I_cp·K_vco/(N·ω_c²)·sqrt((1 + ω_c²T2²)/(1 + ω_c²T1²))`, `C1 = C·T1/T2`, `C2 = C − C1`, `R2 = T2/C2`,
+    /// K_vco in Hz/V (Keese 1996).
+    ///
+    /// # Errors
+    /// `NotPositive`, `PhaseMargin`.
+    ///
+    /// # Examples
+    /// ```
+    /// use thornmap::loop_model::FilterDesign;
+    /// let design = FilterDesign { bandwidth_hz: 20e3, phase_margin_deg: 45.0, design_divider: None };
+    /// let filter = design.components(5e-3, 20e6, 4500.0).unwrap();
+    /// assert!((filter.r2_ohm - 6826.03).abs() < 0.07);
+    /// ```
+    pub fn components(
+        &self,
+        current_a: f64,
+        gain_hz_per_v: f64,
+        divider: f64,
+    ) -> Result<FilterComponents, LoopModelError> {
+        for (what, found) in [
+            ("the loop bandwidth", self.bandwidth_hz),
+            ("the pump current", current_a),
+            ("the tuning gain", gain_hz_per_v),
+            ("the design divider", divider),
+        ] {
+            if !(found.is_finite() && found > 0.0) {
+                return Err(LoopModelError::NotPositive { what, found });
+            }
+        }
+        if !(self.phase_margin_deg > 0.0 && self.phase_margin_deg < 90.0) {
+            return Err(LoopModelError::PhaseMargin { found_deg: self.phase_margin_deg });
+        }
+        let corner_rad = std::f64::consts::TAU * self.bandwidth_hz;
+        let margin = self.phase_margin_deg.to_radians();
+        let pole_s = (margin.cos().recip() - margin.tan()) / corner_rad;
+        let zero_s = (corner_rad * corner_rad * pole_s).recip();
+        let shape = (1.0 + (corner_rad * zero_s).powi(2)) / (1.0 + (corner_rad * pole_s).powi(2));
+        let total = current_a * gain_hz_per_v / (divider * corner_rad * corner_rad) * shape.sqrt();
+        let c1 = total * pole_s / zero_s;
+        let c2 = total - c1;
+        Ok(FilterComponents { c1_farad: Some(c1), r2_ohm: zero_s / c2, c2_farad: c2, r3_c3: None, r4_c4: None })
+    }
+}
+
 /// A measured closed-loop response.
 #[derive(Debug, Clone, PartialEq, Serialize)]
 pub struct ResponseTable {
@@ -89,9 +171,50 @@ pub struct ResponseTable {
     pub points: Vec<(f64, Complex64)>,
 }
 
+impl ResponseTable {
+    /// Checks that offsets rise strictly and everything is finite.
+    ///
+    /// # Errors
+    /// `BadPoints`.
+    pub fn check(&self) -> Result<(), LoopModelError> {
+        let rising = self.points.windows(2).all(|pair| pair[0].0 < pair[1].0);
+        let usable = self.points.iter().all(|(offset, gain)| *offset > 0.0 && offset.is_finite() && gain.is_finite());
+        if self.points.len() < 2 || !rising || !usable {
+            return Err(LoopModelError::BadPoints {
+                what: "a response table",
+                least: 2,
+                found: format!("{} points", self.points.len()),
+            });
+        }
+        Ok(())
+    }
+}
+
 /// A measured charge curve.
 #[derive(Debug, Clone, PartialEq, Serialize)]
 pub struct ChargeTable {
     /// (time error \[s\] strictly rising, charge \[A·s\]).
     pub points: Vec<(f64, f64)>,
+}
+
+/// How the free-running oscillator noise is given.
+#[derive(Debug, Clone, PartialEq, Serialize)]
+#[serde(rename_all = "snake_case")]
+pub enum OscillatorNoise {
+    /// Points of single-sideband noise at the oscillator.
+    Points(NoisePoints),
+    /// Leeson's model in the form `F·k·T/(2·P_s)·(1 + f_c/f)·(1 + (f_0/(2Qf))²)`; copies without the 2 differ by 3 dB
+    /// or, with 2FkT/P_s, by 6 dB.
+    Leeson {
+        /// Noise factor F (power ratio, ≥ 1).
+        noise_factor: f64,
+        /// Signal power \[W\].
+        power_w: f64,
+        /// Loaded quality factor.
+        loaded_q: f64,
+        /// Flicker corner \[Hz\].
+        corner_hz: f64,
+        /// Temperature \[K\].
+        temperature_k: f64,
+    },
 }

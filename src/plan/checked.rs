@@ -5,7 +5,7 @@ use std::collections::BTreeMap;
 use serde::Serialize;
 
 use crate::base::{Assumption, Basis, Exact, Frequency};
-use crate::loop_model::{ChargeTable, FilterComponents, FilterDesign, NoisePoints, ResponseTable};
+use crate::loop_model::{ChargeTable, FilterComponents, FilterDesign, NoisePoints, OscillatorNoise, ResponseTable};
 use crate::modulator::{Dither, ModulatorSettings, ModulusRule};
 use crate::tones::Mechanism;
 
@@ -121,27 +121,6 @@ pub enum Gain {
     Constant(f64),
     /// Points (frequency \[Hz\], gain \[Hz/V\]), rising in frequency; linear between, end values held.
     Table(Vec<(f64, f64)>),
-}
-
-/// How the free-running oscillator noise is given.
-#[derive(Debug, Clone, PartialEq, Serialize)]
-#[serde(rename_all = "snake_case")]
-pub enum OscillatorNoise {
-    /// Points of single-sideband noise at the oscillator.
-    Points(NoisePoints),
-    /// Leeson's model in the form `F·k·T/(2·P_s)·(1 + f_c/f)·(1 + (f_0/(2Qf))²)`.
-    Leeson {
-        /// Noise factor F (power ratio, ≥ 1).
-        noise_factor: f64,
-        /// Signal power \[W\].
-        power_w: f64,
-        /// Loaded quality factor.
-        loaded_q: f64,
-        /// Flicker corner \[Hz\].
-        corner_hz: f64,
-        /// Temperature \[K\].
-        temperature_k: f64,
-    },
 }
 
 /// The voltage-controlled oscillator.

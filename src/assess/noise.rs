@@ -1,0 +1,153 @@
+//! Noise and phase error of one channel.
+
+use std::f64::consts::TAU;
+
+use crate::base::power_from_db;
+use crate::loop_model::{LoopResponse, NoiseBudget, NoiseInput, PhaseFigures, log_grid, noise_budget};
+use crate::plan::ChannelGroup;
+use crate::spectrum::ideal_density;
+
+use super::lines::FamilyLines;
+use super::placement::Placement;
+use super::result::{Origin, Tone};
+use super::setup::{Setup, gain_at};
+
+/// Phase figures of one channel at the output.
+#[derive(Debug, Clone)]
+pub struct ChannelNoise {
+    /// Noise alone; `None` when a source is unknown.
+    pub total: Option<PhaseFigures>,
+    /// Noise with the listed tones; `None` when a source or a tone inside the limits is unknown.
+    pub total_with_tones: Option<PhaseFigures>,
+    /// Known sources with the known parts of the tones.
+    pub known_with_tones: PhaseFigures,
+    /// What is unknown.
+    pub unknown: Vec<String>,
+}
+
+/// Returns the noise budget of a channel on a grid of offsets \[Hz\].
+///
+/// The modulator's noise is the formula of an ideal sequence plus what the detector folds; an exact period has lines
+/// instead, which [`channel_noise`] adds.
+#[must_use]
+pub fn channel_budget(
+    setup: &Setup,
+    placement: &Placement,
+    response: &LoopResponse,
+    lines: Option<&FamilyLines>,
+    offset_hz: Vec<f64>,
+) -> NoiseBudget {
+    let plan = setup.plan();
+    let detector = &plan.detector;
+    let vco_hz = placement.vco.to_f64_hz();
+    let pfd_hz = setup.pfd().to_f64_hz();
+    let order = placement.modulator.order();
+    let shaped = |offset: f64| ideal_density(order, offset, pfd_hz);
+    let is_dense = lines.is_some_and(|lines| lines.period.is_none());
+    // (2π)²·S_0/f_pfd turns cycles² per line spacing into rad²/Hz.
+    let folded = lines
+        .filter(|_| is_dense)
+        .map(|lines| lines.folded.as_ref().map(|noise| TAU * TAU * noise.density_cycles2 / pfd_hz));
+    let input = NoiseInput {
+        response,
+        network: setup.network(),
+        divider: placement.divider_ratio(),
+        vco_hz,
+        reference_hz: plan.reference.frequency.to_f64_hz(),
+        output_divider: placement.output_divider as f64,
+        current_a: detector.current_a,
+        gain_hz_per_v: gain_at(&plan.oscillator.gain, vco_hz),
+        reference: plan.reference.noise.as_ref(),
+        oscillator: plan.oscillator.noise.as_ref(),
+        floor_dbc_per_hz: detector.floor_dbc_per_hz,
+        flicker_dbc_per_hz: detector.flicker_dbc_per_hz,
+        offset_noise_a_per_rthz: (detector.offset_current_a != 0.0).then_some(detector.offset_noise_a_per_rthz),
+        divider_floor_dbc_per_hz: plan.divider.floor_dbc_per_hz,
+        modulator: is_dense.then_some(&shaped as &dyn Fn(f64) -> f64),
+        folded_rad2_per_hz: folded,
+    };
+    noise_budget(&input, offset_hz)
+}
+
+/// Returns the phase figures of a channel over the group's integration limits.
+#[must_use]
+pub fn channel_noise(
+    setup: &Setup,
+    group: &ChannelGroup,
+    placement: &Placement,
+    response: &LoopResponse,
+    lines: Option<&FamilyLines>,
+    tones: &[Tone],
+) -> ChannelNoise {
+    let limits = group.limits.integration_hz;
+    let budget = channel_budget(setup, placement, response, lines, log_grid(limits.0, limits.1));
+    let mut unknown = budget.unknown.clone();
+    let known = PhaseFigures::of(&budget.offset_hz, &budget.known(), limits);
+    let (known, nonlinearity_known) = with_period_lines(known, setup, placement, response, lines, (limits, tones));
+    if !nonlinearity_known {
+        unknown.push("detector nonlinearity on the lines of the period".to_owned());
+    }
+    let inside = |tone: &&Tone| tone.offset_hz >= limits.0 && tone.offset_hz <= limits.1;
+    let mut known_with_tones = known;
+    let mut tones_known = true;
+    for tone in tones.iter().filter(inside) {
+        if let Some(level) = tone.known_level_dbc {
+            known_with_tones = known_with_tones.with_tone(tone.offset_hz, power_from_db(level));
+        }
+        tones_known &= tone.level_dbc.is_some();
+    }
+    let complete = unknown.is_empty();
+    if !tones_known {
+        unknown.push("level of a tone inside the integration limits".to_owned());
+    }
+    ChannelNoise {
+        total: complete.then_some(known),
+        total_with_tones: (complete && tones_known).then_some(known_with_tones),
+        known_with_tones,
+        unknown,
+    }
+}
+
+/// Adds the lines of an exact period that are no listed tones: together they are its noise. Returns whether the
+/// detector's part in them is known.
+fn with_period_lines(
+    figures: PhaseFigures,
+    setup: &Setup,
+    placement: &Placement,
+    response: &LoopResponse,
+    lines: Option<&FamilyLines>,
+    (limits, tones): ((f64, f64), &[Tone]),
+) -> (PhaseFigures, bool) {
+    let Some((lines, period)) = lines.and_then(|lines| lines.period.map(|period| (lines, period))) else {
+        return (figures, true);
+    };
+    let spacing = setup.pfd().to_f64_hz() / period as f64;
+    let per_output = (TAU / placement.output_divider as f64).powi(2);
+    // |H|² on a log grid, linear between: the lines lie far denser than it varies.
+    let grid = log_grid(limits.0, limits.1);
+    let gains: Vec<f64> = grid.iter().map(|f| response.closed_loop(*f).norm_sqr()).collect();
+    // Lines listed as tones are added with the tones, not here.
+    let listed: Vec<f64> =
+        tones.iter().filter(|tone| tone.origin == Origin::SubFractional).map(|tone| tone.offset_hz).collect();
+    let mut cell = 0;
+    let mut figures = figures;
+    let mut is_known = true;
+    for other in &lines.others {
+        let offset = other.bin as f64 * spacing;
+        if offset < limits.0 || offset > limits.1 {
+            continue;
+        }
+        if listed.iter().any(|at| (at - offset).abs() < 1e-3 * spacing) {
+            continue;
+        }
+        is_known &= other.line.nonlinearity.is_some();
+        while cell + 2 < grid.len() && grid[cell + 1] < offset {
+            cell += 1;
+        }
+        let share = (offset - grid[cell]) / (grid[cell + 1] - grid[cell]);
+        let gain = gains[cell] + (gains[cell + 1] - gains[cell]) * share;
+        let size = (other.line.modulator + other.line.nonlinearity.unwrap_or_default()).norm_sqr();
+        figures = figures.with_tone(offset, size * gain * per_output);
+    }
+    (figures, is_known)
+}

@@ -1,0 +1,101 @@
+//! `survey`: the whole plan.
+
+use std::path::{Path, PathBuf};
+
+use crate::assess::AssessError;
+use crate::plan::{Plan, demo_plan};
+use crate::report::{Detail, ReportError, render, write_set};
+use crate::survey::{SurveyResult, survey};
+
+use super::arguments::{DetailChoice, FailOn, SurveyArguments};
+use super::failure::Failure;
+use super::output::{self, Voice};
+use super::plan_file;
+use super::progress::Bar;
+
+/// Channels up to which everything is written in full unless `--detail` says otherwise.
+const FULL_DETAIL_CHANNELS: u64 = 20_000;
+
+/// Runs `survey`.
+///
+/// # Errors
+/// `Failure` with the exit status that fits.
+pub fn run(arguments: &SurveyArguments) -> Result<(), Failure> {
+    let voice = Voice::from_quiet(arguments.common.quiet);
+    let plan = match &arguments.plan {
+        Some(path) => plan_file::read(path)?,
+        None => demo_plan(),
+    };
+    let out = arguments.out.clone().unwrap_or_else(|| PathBuf::from("reports").join(&plan.stem));
+    crate::report::check_target(&out).map_err(report_failure)?;
+    let channels: u64 = plan.groups.iter().map(|group| group.channels.len()).sum();
+    let bar = Bar::new(channels, "channels", voice);
+    let result = in_pool(arguments.common.jobs, || survey(&plan, &|items| bar.advance(items)))?
+        .map_err(|error| assess_failure(&plan, &error))?;
+    bar.finish();
+    let detail = match arguments.detail {
+        Some(DetailChoice::All) => Detail::All,
+        Some(DetailChoice::Flagged) => Detail::Flagged,
+        None if channels > FULL_DETAIL_CHANNELS => Detail::Flagged,
+        None => Detail::All,
+    };
+    let set = render(&result, detail).map_err(report_failure)?;
+    write_set(&out, &set).map_err(report_failure)?;
+    for warning in &result.warnings {
+        voice.say(&format!("warning: {warning}"));
+    }
+    voice.say(&verdict_line(&result, &out));
+    if arguments.common.json {
+        output::print(set.survey_json())?;
+    }
+    flagged(arguments.common.fail_on, result.summary.bad, result.summary.marginal)
+}
+
+/// Returns the run in one sentence.
+fn verdict_line(result: &SurveyResult, out: &Path) -> String {
+    let summary = &result.summary;
+    format!(
+        "{}: {} channels: {} clear, {} marginal, {} bad; report set in {}",
+        result.plan.identity.title,
+        summary.channels,
+        summary.clear,
+        summary.marginal,
+        summary.bad,
+        out.display()
+    )
+}
+
+/// Runs work in a pool of the wanted size.
+///
+/// # Errors
+/// `InputOutput` when the threads cannot be started.
+pub fn in_pool<T: Send>(jobs: Option<u16>, work: impl FnOnce() -> T + Send) -> Result<T, Failure> {
+    let mut builder = rayon::ThreadPoolBuilder::new();
+    if let Some(jobs) = jobs {
+        builder = builder.num_threads(usize::from(jobs));
+    }
+    let pool = builder.build().map_err(|error| Failure::InputOutput(format!("error: threads: {error}")))?;
+    Ok(pool.install(work))
+}
+
+/// Returns the failure of a plan that is refused as a whole.
+pub fn assess_failure(plan: &Plan, error: &AssessError) -> Failure {
+    Failure::Content(format!("error: plan \"{}\": {error}", plan.identity.title))
+}
+
+fn report_failure(error: ReportError) -> Failure {
+    Failure::InputOutput(format!("error: {error}"))
+}
+
+/// Returns status 3 when the wanted state occurs.
+///
+/// # Errors
+/// `Flagged` when it does.
+pub fn flagged(fail_on: Option<FailOn>, bad: u64, marginal: u64) -> Result<(), Failure> {
+    let met = match fail_on {
+        None => false,
+        Some(FailOn::Bad) => bad > 0,
+        Some(FailOn::Marginal) => bad + marginal > 0,
+    };
+    if met { Err(Failure::Flagged) } else { Ok(()) }
+}

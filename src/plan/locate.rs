@@ -1,0 +1,46 @@
+//! Finding the group and place of a channel frequency.
+
+use crate::base::Frequency;
+
+use super::checked::{ChannelList, Plan};
+
+impl Plan {
+    /// Returns the group that a channel frequency belongs to, and its index there when it is on the raster or list:
+    /// the first group whose range (smallest to largest channel, inclusive) holds it, or the named group.
+    ///
+    /// `None` when no group, or not the named one, holds the frequency.
+    #[must_use]
+    pub fn locate(&self, channel: Frequency, group: Option<&str>) -> Option<(usize, Option<u64>)> {
+        self.groups
+            .iter()
+            .enumerate()
+            .filter(|(_, candidate)| group.is_none_or(|name| candidate.name == name))
+            .find_map(|(index, candidate)| candidate.channels.place_of(channel).map(|place| (index, place)))
+    }
+}
+
+impl ChannelList {
+    /// Returns `None` outside the list's range, else the index of the frequency where it is a member.
+    fn place_of(&self, channel: Frequency) -> Option<Option<u64>> {
+        match self {
+            Self::Raster { first, spacing, count } => {
+                let last = self.get(count.checked_sub(1)?)?;
+                if channel < *first || channel > last {
+                    return None;
+                }
+                let steps = channel.hz().minus(&first.hz()).ok()?.over(&spacing.hz()).ok();
+                let index =
+                    steps.filter(crate::base::Exact::is_integer).and_then(|s| u64::try_from(s.numerator()).ok());
+                // One channel may have no spacing at all.
+                Some(index.or((channel == *first).then_some(0)))
+            }
+            Self::List(list) => {
+                let (low, high) = (list.iter().min()?, list.iter().max()?);
+                if channel < *low || channel > *high {
+                    return None;
+                }
+                Some(list.iter().position(|member| *member == channel).and_then(|i| u64::try_from(i).ok()))
+            }
+        }
+    }
+}
