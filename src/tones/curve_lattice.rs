@@ -24,8 +24,9 @@ pub const fn lattice_is_short(reduced_modulus: u64, h: u64) -> bool {
 
 /// The values that the phase error takes when `u = s_1/M` runs over `u_0 + j/M'`, with their probabilities.
 ///
-/// For order ≥ 2 the later residues are taken as uniform given s_1 (they are over a period that is a multiple of M·M'
-/// cycles or was randomised by a seed); ψ is `i − u` with probability `f(i − u)`. For order 1, ψ is `−u` less its mean.
+/// For order ≥ 2 the later residues are taken as uniform given s_1, which a period much longer than M' brings about; then ψ
+/// is `i − u` with probability `f(i − u)`. For order 1, ψ is `−u` less its mean. Where the period itself is short enough
+/// to be run, its exact lines are better than this.
 #[derive(Debug, Clone, PartialEq)]
 pub struct PhaseLattice {
     order: u8,
