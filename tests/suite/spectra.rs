@@ -281,25 +281,62 @@ fn settling_on_samples_and_on_the_density_agree() {
 }
 
 #[test]
-fn offset_tones_follow_the_curve() {
-    // Held to exact sequences: order 3 with dead zone, mismatch and static offset; harmonics 1 … 3.
-    let curve = |p: f64| (1.0 + 0.02 * f64::signum(p)) * (p.abs() - 0.1).max(0.0) * p.signum();
+fn lines_of_sequences_follow_the_curve_in_level_and_phase() {
+    // Dead zone, mismatch and cubic term at several static offsets, orders 1 … 5, harmonics 1 … 3, complex.
+    let curve = |p: f64| (1.0 + 0.1 * f64::signum(p)) * (p.abs() - 0.1).max(0.0) * p.signum() + 2e-3 * p.powi(3);
     let kinks = [-0.1, 0.1];
     let charge = Charge::new(&curve, &kinks);
-    let density = PhaseDensity::mash(3).unwrap();
-    let (word, modulus, count) = (81_235u64, 1u64 << 18, 1usize << 19);
-    let phase = mash_phase(3, word, modulus, &[1], count);
-    for target in [0.0, 0.3, 0.9] {
-        let rest = settle(&density, charge, target).unwrap().offset_cycles;
-        let excess: Vec<f64> = phase.iter().map(|p| curve(p + rest) - p).collect();
-        let folded = folded_noise(&density, charge, rest).density_cycles2;
-        for h in 1..=3 {
-            let found = correlate(&excess, h * word % modulus, modulus, Window::Rectangular);
-            let want = harmonic(&density, charge, rest, h).nonlinearity;
-            // Noise on a line: the folded density at low offsets bounds it within a small factor elsewhere.
-            let deviation = (found.norm() - want.norm()).abs();
-            assert!(deviation < 6.0 * (folded / count as f64).sqrt(), "{target}, h {h}: {found} {want}");
+    let (word, modulus, count) = (81_235u64, 1u64 << 18, 1usize << 20);
+    let mut checked = 0;
+    for order in 1..=5u8 {
+        let density = PhaseDensity::mash(order).unwrap();
+        let phase = without_mean(mash_phase(order.into(), word, modulus, &[1], count));
+        for target in [0.0, 0.3, -0.9] {
+            let rest = settle(&density, charge, target).unwrap().offset_cycles;
+            let excess: Vec<f64> = phase.iter().map(|p| curve(p + rest) - p).collect();
+            let folded = folded_noise(&density, charge, rest);
+            // White noise of the whole variance bounds what noise can put on a line within a small factor; a first-order
+            // sequence has none, there the lattice of 2^18 points aliases.
+            let noise = (folded.density_cycles2.max(folded.variance_cycles2) / count as f64).sqrt();
+            let bound = if order == 1 { 1e-7 } else { 4.0 * noise };
+            for h in 1..=3 {
+                let found = correlate(&excess, h * word % modulus, modulus, Window::Rectangular);
+                let turned = found * Complex64::cis(TAU * h as f64 * phase[0]);
+                let want = harmonic(&density, charge, rest, h).nonlinearity;
+                assert!((turned - want).norm() < bound, "order {order}, {target}, h {h}: {turned} {want} ± {noise}");
+                assert!(
+                    order > 3 || h > 1 || target != 0.0 || want.norm() > 5.0 * bound,
+                    "order {order}, {target}: the line is too weak"
+                );
+                checked += 1;
+            }
         }
+    }
+    assert_eq!(checked, 45);
+}
+
+#[test]
+fn mismatch_levels_of_orders_four_and_five_hold_in_sequences() {
+    // PHYSICS §12: by the density, −59.87 and −66.08 dBc at 2 %; here as coherent means over words, phase included.
+    let size = |p: f64| p + p.abs();
+    let charge = Charge::new(&size, &[0.0]);
+    let mut draw = Draw(404);
+    for order in [2u8, 4, 5] {
+        let (modulus, count, words) = (1u64 << 17, 1usize << 19, 16);
+        let want = harmonic(&PhaseDensity::mash(order).unwrap(), charge, 0.0, 1).nonlinearity;
+        let mut mean = Complex64::ZERO;
+        for _ in 0..words {
+            let word = draw.odd_below(modulus);
+            let phase = mash_phase(order.into(), word, modulus, &[draw.odd_below(modulus)], count);
+            let sizes: Vec<f64> = phase.iter().map(|p| p.abs()).collect();
+            mean += correlate(&sizes, word, modulus, Window::Rectangular) * Complex64::cis(TAU * phase[0])
+                / f64::from(words);
+        }
+        let folded = folded_noise(&PhaseDensity::mash(order).unwrap(), charge, 0.0).density_cycles2;
+        let deviation = (folded / count as f64 / f64::from(words)).sqrt();
+        assert!((mean - want).norm() < 4.0 * deviation, "order {order}: {mean} {want} ± {deviation}");
+        // 4 deviations are at most this share of the line, so a wrong factor would show.
+        assert!(deviation < 0.12 * want.norm(), "order {order}: {deviation}");
     }
 }
 
