@@ -11,7 +11,7 @@ type Plan = Arc<dyn RealToComplex<f64>>;
 
 /// Sum of the lengths whose plans are kept. A plan of a prime length near 2^20 takes tens of megabytes,
 /// so a survey of many lengths must not keep all of them.
-const KEPT_POINTS: usize = 1 << 22;
+const KEPT_POINTS: usize = 1 << 21;
 
 /// Plans of the transforms, shared by all workers.
 pub struct FftStage {

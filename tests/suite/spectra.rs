@@ -4,6 +4,8 @@
 use std::f64::consts::{PI, TAU};
 
 use num_complex::Complex64;
+use proptest::prelude::*;
+use proptest::test_runner::RngSeed;
 use thornmap::base::db_from_power;
 use thornmap::spectrum::{
     DensitySettings, FftScratch, FftStage, Neighbourhood, Window, correlate, divided_dbc, ideal_density,
@@ -496,5 +498,71 @@ fn phase_modulation_identities() {
     assert!((sideband_dbc(peak_rad / 2.0 / TAU).unwrap() + 26.021).abs() < 5.1e-4);
     for none in [0.0, -1.0, f64::NAN, f64::INFINITY] {
         assert_eq!(sideband_dbc(none), None);
+    }
+}
+
+proptest! {
+    // A fixed seed: every run draws the same cases.
+    #![proptest_config(ProptestConfig {
+        cases: 128,
+        rng_seed: RngSeed::Fixed(4021),
+        failure_persistence: None,
+        ..ProptestConfig::default()
+    })]
+
+    #[test]
+    fn lines_keep_power_and_turn_with_a_shift(samples in prop::collection::vec(-100.0f64..100.0, 1..400), shift in 0usize..400) {
+        let count = samples.len();
+        let shift = shift % count;
+        let found = lines(&samples);
+        let mut moved = samples.clone();
+        moved.rotate_left(shift);
+        let turned = lines(&moved);
+        let mut power = 0.0;
+        for (k, (line, other)) in found.iter().zip(&turned).enumerate() {
+            let want = line * Complex64::cis(TAU * (k * shift % count) as f64 / count as f64);
+            prop_assert!((other - want).norm() < 1e-12, "line {} of {}", k, count);
+            power += line.norm_sqr() * if k == 0 || 2 * k == count { 1.0 } else { 2.0 };
+        }
+        let square = samples.iter().map(|x| x * x).sum::<f64>() / count as f64;
+        prop_assert!((power - square).abs() <= 1e-12 * square.max(1.0));
+    }
+
+    #[test]
+    fn the_curve_is_linear_in_the_charge_and_mirrors_with_it(
+        order in 1u8..=5, h in 1u64..30, rest in -3.0f64..3.0, kink in -2.0f64..2.0, slope in -0.3f64..0.3, cubic in -0.01f64..0.01,
+    ) {
+        let density = PhaseDensity::mash(order).unwrap();
+        let bent = |p: f64| p + slope * (p - kink).max(0.0);
+        let cubed = |p: f64| p + cubic * p.powi(3);
+        let both = |p: f64| bent(p) + cubed(p) - p;
+        let mirrored = |p: f64| -both(-p);
+        let (kinks, mirrored_kinks) = ([kink], [-kink]);
+        let line = |charge, at| harmonic(&density, charge, at, h).nonlinearity;
+        let whole = line(Charge::new(&both, &kinks), rest);
+        let parts = line(Charge::new(&bent, &kinks), rest) + line(Charge::new(&cubed, &[]), rest);
+        prop_assert!((whole - parts).norm() < 1e-12);
+        // ψ and −ψ are equally likely: the mirrored curve has the negative conjugate line.
+        let mirror = line(Charge::new(&mirrored, &mirrored_kinks), -rest);
+        prop_assert!((mirror + whole.conj()).norm() < 1e-12);
+    }
+
+    #[test]
+    fn a_settled_mean_is_on_target(
+        order in 1u8..=5, target in -4.0f64..4.0, mismatch in -0.5f64..0.5, dead in 0.0f64..0.8, cubic in 0.0f64..0.01,
+    ) {
+        let curve = |p: f64| (1.0 + mismatch / 2.0 * f64::signum(p)) * (p.abs() - dead).max(0.0) * p.signum() + cubic * p.powi(3);
+        let kinks = [-dead, 0.0, dead];
+        let density = PhaseDensity::mash(order).unwrap();
+        let rest = settle(&density, Charge::new(&curve, &kinks), target).unwrap();
+        // By the midpoint rule, independent of the quadrature: error some (1/2000)² of the curvature.
+        let reach = density.reach_cycles();
+        let steps = 4000 * u32::from(order);
+        let width = 2.0 * reach / f64::from(steps);
+        let mean: f64 = (0..steps)
+            .map(|i| -reach + (f64::from(i) + 0.5) * width)
+            .map(|x| density.at(x) * curve(x + rest.offset_cycles) * width)
+            .sum();
+        prop_assert!((mean - target).abs() < 1e-5, "{} {}", mean, target);
     }
 }
