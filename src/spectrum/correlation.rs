@@ -7,7 +7,7 @@ use num_complex::Complex64;
 use super::Window;
 use super::oracle::step;
 
-/// Samples between two fresh phasors: rounding grows to some 64·2^-53 and is then dropped.
+/// Samples between two fresh phasors; within a block a table of directly computed powers serves, so rounding never grows.
 const RENEWAL: usize = 64;
 
 /// Returns the line coefficient at exactly `residue/modulus` cycles per sample, in the unit of the samples:
@@ -63,12 +63,14 @@ fn phasor_sum(samples: &[f64], residue: u64, modulus: u64) -> Complex64 {
     let mut start = 0;
     let mut sum = Complex64::ZERO;
     for block in samples.chunks(RENEWAL) {
-        let (mut real, mut imaginary) = (0.0, 0.0);
-        for (sample, power) in block.iter().zip(&powers) {
-            real += sample * power.re;
-            imaginary += sample * power.im;
+        // Four sums side by side: one alone waits for each addition.
+        let mut lanes = [Complex64::ZERO; 4];
+        for (samples, powers) in block.chunks(4).zip(powers.chunks(4)) {
+            for ((lane, sample), power) in lanes.iter_mut().zip(samples).zip(powers) {
+                *lane += power * sample;
+            }
         }
-        sum += Complex64::new(real, imaginary) * turn(start);
+        sum += (lanes[0] + lanes[1] + lanes[2] + lanes[3]) * turn(start);
         start = step(start, block_step, modulus);
     }
     sum

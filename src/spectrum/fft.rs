@@ -11,7 +11,7 @@ type Plan = Arc<dyn RealToComplex<f64>>;
 
 /// Sum of the lengths whose plans are kept. A plan of a prime length near 2^20 takes tens of megabytes,
 /// so a survey of many lengths must not keep all of them.
-const KEPT_POINTS: usize = 1 << 22;
+const KEPT_POINTS: usize = 1 << 21;
 
 /// Plans of the transforms, shared by all workers.
 pub struct FftStage {
@@ -21,8 +21,8 @@ pub struct FftStage {
 /// Buffers of one worker; they grow to the longest record and are reused.
 #[derive(Debug, Default)]
 pub struct FftScratch {
-    input: Vec<f64>,
-    output: Vec<Complex64>,
+    pub(super) input: Vec<f64>,
+    pub(super) output: Vec<Complex64>,
     work: Vec<Complex64>,
 }
 
@@ -106,16 +106,6 @@ impl FftStage {
         }
         plan.process_with_scratch(&mut scratch.input, &mut scratch.output, &mut scratch.work)
             .expect("the buffers were sized by the plan");
-    }
-
-    /// Returns buffers' input, to be filled before [`Self::transform`].
-    pub(super) fn input(scratch: &mut FftScratch) -> &mut Vec<f64> {
-        &mut scratch.input
-    }
-
-    /// Returns the output of the last [`Self::transform`].
-    pub(super) fn output(scratch: &FftScratch) -> &[Complex64] {
-        &scratch.output
     }
 }
 

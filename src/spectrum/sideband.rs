@@ -6,8 +6,8 @@ use crate::base::db_from_power;
 
 /// Returns the single-sideband level \[dBc\] of a phase line with coefficient magnitude `|c|` \[cycles\]: `20·log10(2π|c|)`.
 ///
-/// `2π|c|` is half the peak phase deviation. Small angles only: above −20 dBc the true sideband (Bessel) is lower,
-/// by 0.28 dB at −12 dBc. `None` for a zero, negative or not finite amplitude: no line, not "−∞ dBc".
+/// `2π|c|` is half the peak phase deviation. Small angles only: against the carrier that is left the true
+/// sideband (Bessel, J₁/J₀) is higher, by 0.01 dB at −26 dBc and 0.28 dB at −12 dBc. `None` for a zero, negative or not finite amplitude: no line, not "−∞ dBc".
 ///
 /// # Examples
 /// ```

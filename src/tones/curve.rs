@@ -57,7 +57,8 @@ pub struct CurveLine {
 ///
 /// Gauss–Legendre on pieces between the density's knots and the curve's kinks; the error is some 1e-14 of
 /// `∫ f·|g(x + a) − x − a|`. For a long period: on a short lattice of s_1 harmonics alias, see
-/// [`super::lattice_is_short`]. The phase reference is `s_1 = 0`.
+/// [`super::lattice_is_short`]. The phase is that of a sequence that starts at
+/// ψ ≡ 0 (mod 1); one that starts at `ψ[0]` has the line `c·e^{−j2πh·ψ[0]}`.
 ///
 /// # Panics
 /// For `h = 0`, the mean, which is no line.

@@ -16,7 +16,8 @@ const POINTS_PER_HARMONIC: u64 = 64;
 ///
 /// On M' values of s_1 the harmonics h and h ± M' are one line. A kink's coefficients fall as 1/h², so the neglected
 /// ones are below `2·(h/(M' − h))²` of the line: 0.0005, or 0.0044 dB, at `M' = 64·h`. Where the line itself nearly
-/// vanishes (an offset can null it) the relative error is larger.
+/// vanishes (an offset can null it), or where the charge curve jumps (coefficients fall as 1/h only, 0.3 dB at worst), the
+/// relative error is larger: then take the lattice as far as [`LONGEST_LATTICE`].
 #[must_use]
 pub const fn lattice_is_short(reduced_modulus: u64, h: u64) -> bool {
     reduced_modulus < POINTS_PER_HARMONIC.saturating_mul(h)
@@ -24,8 +25,9 @@ pub const fn lattice_is_short(reduced_modulus: u64, h: u64) -> bool {
 
 /// The values that the phase error takes when `u = s_1/M` runs over `u_0 + j/M'`, with their probabilities.
 ///
-/// For order ≥ 2 the later residues are taken as uniform given s_1 (they are over a period that is a multiple of M·M'
-/// cycles or was randomised by a seed); ψ is `i − u` with probability `f(i − u)`. For order 1, ψ is `−u` less its mean.
+/// For order ≥ 2 the later residues are taken as uniform given s_1, which a period much longer than M' brings about; then ψ
+/// is `i − u` with probability `f(i − u)`. For order 1, ψ is `−u` less its mean. Where the period itself is short enough
+/// to be run, its exact lines are better than this.
 #[derive(Debug, Clone, PartialEq)]
 pub struct PhaseLattice {
     order: u8,
