@@ -5,6 +5,8 @@ mod document;
 mod error;
 mod figures;
 mod json;
+mod page;
+mod page_rows;
 mod paint;
 mod plots;
 mod survey_json;

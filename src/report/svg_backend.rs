@@ -246,7 +246,11 @@ mod tests {
             for x in [10, 25] {
                 area.draw(&Rectangle::new([(x, 10), (x + 5, 20)], Paint::Bad.token().filled())).unwrap();
             }
-            area.draw(&PathElement::new(vec![(0, 0), (15, 7)], plotters::style::Color::stroke_width(&Paint::Edge.token(), 12))).unwrap();
+            area.draw(&PathElement::new(
+                vec![(0, 0), (15, 7)],
+                plotters::style::Color::stroke_width(&Paint::Edge.token(), 12),
+            ))
+            .unwrap();
         }
         assert_eq!(
             body,

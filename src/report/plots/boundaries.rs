@@ -18,20 +18,15 @@ const HEIGHT: u32 = 380;
 pub(super) fn boundaries(result: &SurveyResult) -> Result<Option<Plot>, ReportError> {
     let channels = &result.channels;
     let offsets: Vec<f64> = channels.iter().filter_map(offset_hz).collect();
-    let lines = channels.iter().flat_map(|channel| [channel.guard_hz, channel.loop_edge_hz]).flatten();
-    let positive = offsets.iter().copied().chain(lines).filter(|hz| hz.is_finite() && *hz > 0.0);
-    let (low, high) = positive.fold((f64::INFINITY, 0.0f64), |(low, high), hz| (low.min(hz), high.max(hz)));
-    let on_boundary = offsets.iter().filter(|hz| **hz == 0.0).count();
-    if offsets.is_empty() || !low.is_finite() {
-        return Ok(None);
-    }
-    // Channels exactly on a boundary stand on the lowest line: zero has no place on this axis.
-    let low = if on_boundary > 0 { low / 3.0 } else { low / 1.3 };
+    let lines: Vec<f64> =
+        channels.iter().flat_map(|channel| [channel.guard_hz, channel.loop_edge_hz]).flatten().collect();
+    let smallest = |figures: &[f64]| figures.iter().copied().filter(|hz| *hz > 0.0).fold(f64::INFINITY, f64::min);
+    let high = offsets.iter().chain(&lines).copied().fold(0.0, f64::max);
+    // Far inside guard and loop the exact depth matters no more; it would only press the rest together.
+    let low = (smallest(&offsets) / 1.3).min(smallest(&lines) / 3.0).max(smallest(&lines) / 300.0);
+    let held = offsets.iter().filter(|hz| **hz < low).count();
     let Some(mut y) = Axis::log_hz(low, high * 1.3, "tone offset from the carrier") else { return Ok(None) };
-    if on_boundary > 0 {
-        y.ticks.retain(|(tick, _)| *tick > 1.5 * low);
-        y.ticks.push((low, "0 Hz".into()));
-    }
+    y.mark_held(held > 0);
     let Some(along) = ChannelAxis::new(channels) else { return Ok(None) };
     let mut body = String::new();
     let mut frame = Frame::new(&mut body, HEIGHT, ROOM, along.axis.clone(), y);
@@ -49,7 +44,7 @@ pub(super) fn boundaries(result: &SurveyResult) -> Result<Option<Plot>, ReportEr
     line_labels(&mut frame, labels);
     marks(&mut frame, &along, channels);
     frame.finish(NAME)?;
-    Ok(Some(plot(NAME, TITLE, caption(result, on_boundary), HEIGHT, &body)))
+    Ok(Some(plot(NAME, TITLE, caption(result, held), HEIGHT, &body)))
 }
 
 fn offset_hz(channel: &ChannelResult) -> Option<f64> {
@@ -123,14 +118,14 @@ fn line_labels(frame: &mut Frame<'_>, [guard, edge]: [Option<f64>; 2]) {
     }
 }
 
-fn caption(result: &SurveyResult, on_boundary: usize) -> String {
+fn caption(result: &SurveyResult, held: usize) -> String {
     let mut text = format!(
         "Every channel by the offset of its nearest boundary tone (fractions p/q of the PFD frequency up to q = {}). \
          At or below the dashed line a tone is inside the guard, at or below the solid line inside the loop.",
         result.plan.boundary.largest_q
     );
-    if on_boundary > 0 {
-        text.push_str(&format!(" Exactly on a boundary: {} (lowest line).", count(on_boundary as u64)));
+    if held > 0 {
+        text.push_str(&format!(" On the lowest line, at that offset or lower: {}.", count(held as u64)));
     }
     let without = result.channels.iter().filter(|channel| channel.legal && channel.boundary.is_none()).count();
     if without > 0 {

@@ -58,6 +58,15 @@ impl Axis {
         Some(Self { low, high, scale: Scale::Log, ticks, title: title.to_owned() })
     }
 
+    /// Labels the low end as "this or lower" where figures below it are drawn on it.
+    pub(super) fn mark_held(&mut self, any: bool) {
+        if any {
+            let near = self.low * (self.high / self.low).powf(0.05);
+            self.ticks.retain(|(tick, _)| *tick > near);
+            self.ticks.push((self.low, format!("≤ {}", with_prefix(self.low, "Hz", 2))));
+        }
+    }
+
     /// Returns where a figure lies between 0 (low end) and 1 (high end), held at the ends.
     pub(super) fn share(&self, value: f64) -> f64 {
         let share = match self.scale {
@@ -310,7 +319,7 @@ impl<'a> Frame<'a> {
 pub(super) fn plot(name: &'static str, title: &'static str, caption: String, height: u32, body: &str) -> super::Plot {
     let size = (WIDTH, height);
     let svg = picture(size, name, title, &caption, body);
-    super::Plot { name, title, caption, size, svg }
+    super::Plot { name, caption, size, svg }
 }
 
 #[cfg(test)]

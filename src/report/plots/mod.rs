@@ -18,8 +18,6 @@ use super::paint::Paint;
 pub(crate) struct Plot {
     /// File name without its ending.
     pub name: &'static str,
-    /// Heading.
-    pub title: &'static str,
     /// What to read from it.
     pub caption: String,
     /// Width and height.

@@ -41,7 +41,11 @@ pub(super) fn tone_map(result: &SurveyResult) -> Result<Option<Plot>, ReportErro
     let tones = result.channels.iter().flat_map(|channel| &channel.tones);
     let offsets = tones.map(|tone| tone.offset_hz).filter(|hz| hz.is_finite() && *hz > 0.0);
     let (low, high) = offsets.fold((f64::INFINITY, 0.0f64), |(low, high), hz| (low.min(hz), high.max(hz)));
-    let Some(y) = Axis::log_hz(low / 1.1, high * 1.1, "offset from the carrier") else { return Ok(None) };
+    let edge = result.channels.iter().filter_map(|channel| channel.loop_edge_hz).fold(f64::INFINITY, f64::min);
+    // Tones far below the loop edge share the lowest row, so that a single one does not press the rest together.
+    let floor = if edge.is_finite() { (low / 1.1).max(edge / 1000.0) } else { low / 1.1 };
+    let Some(mut y) = Axis::log_hz(floor, high * 1.1, "offset from the carrier") else { return Ok(None) };
+    y.mark_held(low < floor);
     let Some(along) = ChannelAxis::new(&result.channels) else { return Ok(None) };
     let mut body = String::new();
     let room = Room { right: 18.0, top: 62.0, ..ROOM };
@@ -85,11 +89,16 @@ fn draw(frame: &mut Frame<'_>, cells: &[Shown], columns: usize) {
         for (column, cells) in cells.chunks(ROWS).enumerate() {
             let mut row = 0;
             while row < ROWS {
-                let run = cells[row..].iter().take_while(|cell| **cell == shown).count();
+                let x = left + wide * column as f64;
+                let mut run = cells[row..].iter().take_while(|cell| **cell == shown).count();
+                // Unknown cells are thin strokes: texture tells them from levels where colour does not.
+                let thin = if shown == Shown::Unknown { 0.3 * high } else { 0.0 };
+                if shown == Shown::Unknown {
+                    run = run.min(1);
+                }
                 if run > 0 {
-                    let x = left + wide * column as f64;
-                    let from = (x, bottom - high * (row + run) as f64);
-                    frame.block(from, (x + wide, bottom - high * row as f64), paint);
+                    let from = (x, bottom - high * (row + run) as f64 + thin);
+                    frame.block(from, (x + wide, bottom - high * row as f64 - thin), paint);
                 }
                 row += run.max(1);
             }
