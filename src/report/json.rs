@@ -316,6 +316,8 @@ impl ser::SerializeMap for Compound<'_> {
 mod tests {
     use std::collections::BTreeMap;
 
+    use serde::Serialize;
+
     use super::*;
 
     #[derive(Serialize)]

@@ -5,7 +5,12 @@ mod document;
 mod error;
 mod figures;
 mod json;
+mod page;
+mod page_rows;
+mod paint;
+mod plots;
 mod survey_json;
+mod svg_backend;
 mod write;
 
 pub use columns::{COLUMNS, Cell, Column, channels_csv};

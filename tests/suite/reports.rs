@@ -411,3 +411,17 @@ fn a_link_to_a_folder_stays_a_link() {
     assert!(link.symlink_metadata().unwrap().is_symlink());
     assert_eq!(fs::read_to_string(real.join("report.html")).unwrap(), "x");
 }
+
+/// Writes invented sets to look at, below the build folder.
+#[test]
+#[ignore = "for eyes: run with --ignored after a change of looks"]
+fn writes_sets_to_look_at() {
+    for (name, count) in [("usual", 137), ("wide", 5601)] {
+        let set = render(&fixture::survey(count), &ALL).unwrap();
+        let out = Path::new(env!("CARGO_TARGET_TMPDIR")).join("look").join(name);
+        write_set(&out, &set).unwrap();
+        for file in &set.files {
+            println!("{name}/{} {}", file.path, file.bytes.len());
+        }
+    }
+}

@@ -1,0 +1,53 @@
+//! The plots of a report set, each a picture with its own words.
+
+mod boundaries;
+mod frame;
+mod margins;
+mod spectrum;
+mod tone_map;
+
+use super::ReportError;
+use super::svg_backend::standalone;
+use crate::assess::Verdict;
+use crate::survey::SurveyResult;
+
+use super::paint::Paint;
+
+/// One plot.
+#[derive(Debug, Clone)]
+pub(crate) struct Plot {
+    /// File name without its ending.
+    pub name: &'static str,
+    /// What to read from it.
+    pub caption: String,
+    /// Width and height.
+    pub size: (u32, u32),
+    /// The picture as it stands in the page.
+    pub svg: String,
+}
+
+impl Plot {
+    /// Returns the picture as a file of its own.
+    pub(crate) fn file(&self) -> String {
+        standalone(self.size, &self.svg)
+    }
+}
+
+/// Returns every plot that the result has figures for, in reading order.
+pub(crate) fn plots(result: &SurveyResult) -> Result<Vec<Plot>, ReportError> {
+    let drawn = [
+        boundaries::boundaries(result)?,
+        tone_map::tone_map(result)?,
+        spectrum::spectrum(result)?,
+        margins::margins(result)?,
+    ];
+    Ok(drawn.into_iter().flatten().collect())
+}
+
+fn paint_of(verdict: Verdict) -> Paint {
+    match verdict {
+        Verdict::Clear => Paint::Clear,
+        Verdict::Marginal => Paint::Marginal,
+        Verdict::Bad => Paint::Bad,
+    }
+}
