@@ -147,11 +147,15 @@ fn identity(
 }
 
 /// A channel with a legal word, on its way through the stages.
-struct Legal<'a> {
-    setup: &'a Setup<'a>,
-    group: &'a ChannelGroup,
-    channel: Frequency,
-    placement: &'a Placement,
+pub(super) struct Legal<'a> {
+    /// The plan made ready.
+    pub setup: &'a Setup<'a>,
+    /// The channel's group.
+    pub group: &'a ChannelGroup,
+    /// The channel.
+    pub channel: Frequency,
+    /// Its word.
+    pub placement: &'a Placement,
 }
 
 impl Legal<'_> {
@@ -174,7 +178,7 @@ impl Legal<'_> {
         result.guard_hz = zone.guard_hz();
         result.warnings.extend(response.warnings());
         self.fill_boundaries(result, &zone)?;
-        let lines = self.lines(result, scratch)?;
+        let lines = self.lines(result.pfd_hz, scratch)?;
         result.method = lines.as_ref().map_or(Method::ClosedForm, |(_, lines)| lines.method);
         let candidates = self.candidates(result, &response, lines.as_ref())?;
         self.fill_tones(result, candidates, &zone);
@@ -248,9 +252,9 @@ impl Legal<'_> {
     }
 
     /// Returns the tones of the modulator family and their lines; `None` where the modulator is held.
-    fn lines(
+    pub fn lines(
         &self,
-        result: &ChannelResult,
+        pfd_hz: f64,
         scratch: &mut Scratch,
     ) -> Result<Option<(Vec<FamilyTone>, FamilyLines)>, AssessError> {
         let placement = self.placement;
@@ -274,7 +278,7 @@ impl Legal<'_> {
             charge,
             target_cycles: static_charge_cycles(drained, detector.current_a, placement.divider_ratio()),
             record: plan.analysis.record,
-            pfd_hz: result.pfd_hz,
+            pfd_hz,
         };
         let lines = family_lines(&input, self.setup.fft(), scratch)
             .map_err(|source| AssessError::Lines { channel: self.channel, source })?;
@@ -282,7 +286,7 @@ impl Legal<'_> {
     }
 
     /// Returns the charge curve of the channel; `None` while the mismatch is unknown.
-    fn charge_curve(&self) -> Option<ChargeCurve> {
+    pub fn charge_curve(&self) -> Option<ChargeCurve> {
         let detector = &self.plan().detector;
         let vco_hz = self.placement.vco.to_f64_hz();
         if let Some(table) = &detector.table {

@@ -4,7 +4,7 @@ use num_complex::Complex64;
 use num_traits::ToPrimitive;
 
 use crate::modulator::{ModulatorConfig, ModulatorError, Period, phase_numerators, start, transient};
-use crate::spectrum::{FftScratch, FftStage, Window, correlate_each};
+use crate::spectrum::{Density, DensitySettings, FftScratch, FftStage, SpectrumError, Window, correlate_each};
 use crate::tones::{
     Charge, CurveError, CurveLine, FamilyTone, FoldedNoise, LONGEST_LATTICE, PhaseDensity, PhaseLattice, folded_noise,
     harmonic, harmonic_on_lattice, lattice_is_short, level_uncertainty_db, line_noise_cycles2, settle,
@@ -54,6 +54,8 @@ pub struct FamilyLines {
     pub others: Vec<PeriodLine>,
     /// T of an exact period.
     pub period: Option<u64>,
+    /// Where the loop rests on the charge curve, a \[cycles\]; `None` without a known curve.
+    pub rest_cycles: Option<f64>,
     /// Noise that the nonlinearity folds into the loop, for sequences that are no exact period.
     pub folded: Option<FoldedNoise>,
     /// Largest difference between a cut record and the curve, over the lines that stand above the record's noise \[dB\].
@@ -69,6 +71,9 @@ pub enum LinesError {
     /// The sequence leaves its range.
     #[error(transparent)]
     Modulator(#[from] ModulatorError),
+    /// A density cannot be estimated.
+    #[error(transparent)]
+    Spectrum(#[from] SpectrumError),
 }
 
 /// What the lines of one channel depend on.
@@ -111,6 +116,21 @@ impl Scratch {
         Ok(())
     }
 
+    /// Returns the density of ψ \[cycles²/Hz, two-sided\] over a record.
+    ///
+    /// # Errors
+    /// `LinesError` when the sequence leaves its range or the settings do not fit the record.
+    pub(super) fn density(
+        &mut self,
+        config: &ModulatorConfig,
+        fft: &FftStage,
+        length: usize,
+        settings: DensitySettings,
+    ) -> Result<Density, LinesError> {
+        self.run(config, length)?;
+        Ok(fft.density(&self.phase_cycles, settings, &mut self.fft)?)
+    }
+
     /// Leaves g(ψ + a) − ψ in `excess_cycles`.
     fn bend(&mut self, charge: Charge<'_>, offset_cycles: f64) {
         self.excess_cycles.clear();
@@ -141,10 +161,12 @@ fn exact_lines(
     let length = usize::try_from(period).map_err(|_| CurveError::NoSamples)?;
     scratch.run(input.modulator, length)?;
     let phase = fft.lines(&scratch.phase_cycles, &mut scratch.fft);
+    let mut rest_cycles = None;
     let excess = match input.charge {
         None => None,
         Some(charge) => {
             let rest = settle_samples(&scratch.phase_cycles, charge, input.target_cycles)?;
+            rest_cycles = Some(rest.offset_cycles);
             scratch.bend(charge, rest.offset_cycles);
             Some(fft.lines(&scratch.excess_cycles, &mut scratch.fft))
         }
@@ -173,6 +195,7 @@ fn exact_lines(
         family,
         others,
         period: Some(period),
+        rest_cycles,
         folded: None,
         record_difference_db: None,
     })
@@ -221,6 +244,7 @@ fn curve_lines(input: &LineInput, scratch: &mut Scratch) -> Result<FamilyLines, 
         family,
         others: Vec::new(),
         period: None,
+        rest_cycles: input.charge.map(|_| rest.offset_cycles),
         folded,
         record_difference_db,
     })
@@ -288,10 +312,12 @@ fn windowed_lines(input: &LineInput, scratch: &mut Scratch) -> Result<FamilyLine
     let residues: Vec<u64> = input.family.iter().map(|tone| tone.residue.unsigned_abs()).collect();
     let m = input.modulator.modulus().get();
     let phase = correlate_each(&scratch.phase_cycles, &residues, m, window);
+    let mut rest_cycles = None;
     let excess = match input.charge {
         None => None,
         Some(charge) => {
             let rest = settle_samples(&scratch.phase_cycles, charge, input.target_cycles)?;
+            rest_cycles = Some(rest.offset_cycles);
             scratch.bend(charge, rest.offset_cycles);
             Some(correlate_each(&scratch.excess_cycles, &residues, m, window))
         }
@@ -310,6 +336,7 @@ fn windowed_lines(input: &LineInput, scratch: &mut Scratch) -> Result<FamilyLine
         family,
         others: Vec::new(),
         period: None,
+        rest_cycles,
         folded: None,
         record_difference_db: None,
     })

@@ -9,6 +9,8 @@ mod placement;
 mod result;
 mod setup;
 mod verdict;
+mod view;
+mod whole_period;
 
 pub use lines::{FamilyLines, Line, LinesError, PeriodLine, Scratch};
 pub use noise::{ChannelNoise, channel_budget};
@@ -16,3 +18,4 @@ pub use placement::{Placement, PlacementError, place};
 pub use result::{BoundaryNear, ChannelResult, Contributions, Illegal, Method, Origin, Reason, Rule, Tone, Verdict};
 pub use setup::{AssessError, LoopSource, Setup, gain_at};
 pub use verdict::{Evidence, MaskState, judge};
+pub use view::{SpectrumView, spectrum_view};

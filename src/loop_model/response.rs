@@ -117,8 +117,7 @@ impl LoopResponse {
         response.phase_margin_deg =
             unity.and_then(|f| response.open_loop(f)).map(|a| 180.0 + a.arg().to_degrees() - wrap(a.arg()));
         let edge = response.open_loop_sampled(point.pfd_hz / 2.0).map_or(f64::NAN, |a| a.re);
-        // NaN must refuse as well.
-        if !(edge > -1.0) {
+        if edge.is_nan() || edge <= -1.0 {
             return Err(LoopModelError::Unstable { ratio: unity.map_or(f64::NAN, |f| point.pfd_hz / f), found: edge });
         }
         response.scan();

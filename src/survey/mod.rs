@@ -1,5 +1,10 @@
 //! All channels in parallel, the summary, and the run's own check of its fast path.
 
+mod method_check;
 mod result;
+mod run;
+mod spectrum_view;
 
-pub use result::{LoopSummary, MethodCheck, Range3, SpectrumView, Summary, SurveyResult};
+pub use crate::assess::SpectrumView;
+pub use result::{LoopSummary, MethodCheck, Range3, Summary, SurveyResult};
+pub use run::{summarise, survey};

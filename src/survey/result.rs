@@ -2,7 +2,7 @@
 
 use std::collections::BTreeMap;
 
-use crate::assess::{ChannelResult, Rule};
+use crate::assess::{ChannelResult, Rule, SpectrumView};
 use crate::base::Assumption;
 use crate::loop_model::FilterComponents;
 use crate::plan::Plan;
@@ -62,23 +62,6 @@ pub struct MethodCheck {
     pub channels: u64,
     /// Largest difference of a compared line; `None` when none was compared.
     pub worst_difference_db: Option<f64>,
-}
-
-/// The modulator's phase noise on one channel, before and after the loop, at the output.
-#[derive(Debug, Clone, Default, serde::Serialize)]
-pub struct SpectrumView {
-    /// Position in `SurveyResult::channels`.
-    pub channel: usize,
-    /// Offsets \[Hz\], rising.
-    pub offset_hz: Vec<f64>,
-    /// From the computed sequence, before the loop, at the VCO \[dBc/Hz\]; `NaN`-free, `None` where a bin is empty.
-    pub sequence_dbc_per_hz: Vec<Option<f64>>,
-    /// The formula for an ideal sequence, before the loop, at the VCO \[dBc/Hz\].
-    pub formula_dbc_per_hz: Vec<Option<f64>>,
-    /// Modulator part after the loop, at the output \[dBc/Hz\].
-    pub modulator_dbc_per_hz: Vec<Option<f64>>,
-    /// Total after the loop, at the output \[dBc/Hz\]; `None` when a source is unknown.
-    pub total_dbc_per_hz: Vec<Option<f64>>,
 }
 
 /// Everything a survey found.

@@ -55,8 +55,7 @@ pub fn survey(plan: &Plan, done: &(dyn Fn(u64) + Sync)) -> Result<SurveyResult, 
 /// Returns the counts over the channels; every rule has an entry.
 #[must_use]
 pub fn summarise(channels: &[ChannelResult]) -> Summary {
-    let mut summary =
-        Summary { reasons: Rule::ALL.into_iter().map(|rule| (rule, 0)).collect(), ..Summary::default() };
+    let mut summary = Summary { reasons: Rule::ALL.into_iter().map(|rule| (rule, 0)).collect(), ..Summary::default() };
     for channel in channels {
         summary.channels += 1;
         match channel.verdict {
@@ -112,7 +111,10 @@ fn conventions() -> Vec<(&'static str, &'static str)> {
         ("level", "dBc, one sideband of the carrier at the output (after the output divider), small-angle"),
         ("offset", "distance from the carrier in Hz, positive; an output divider does not change it"),
         ("phase_noise", "L(f) in dBc/Hz, single sideband, half the one-sided phase density (IEEE Std 1139)"),
-        ("boundary", "p/q of the PFD frequency (family comparison), of the reference (family reference, when it differs) or of the reference against the output itself (family output)"),
+        (
+            "boundary",
+            "p/q of the PFD frequency (family comparison), of the reference (family reference, when it differs) or of the reference against the output itself (family output)",
+        ),
         ("guard", "acts on the tone offset, inclusive"),
         ("loop_edge", "acts on the tone offset, inclusive; each channel has its own"),
         ("margin", "limit minus level; positive passes, zero passes"),

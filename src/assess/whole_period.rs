@@ -1,0 +1,101 @@
+//! The slow route to a line: direct correlation over every cycle of an exact period.
+
+use std::f64::consts::TAU;
+
+use num_complex::Complex64;
+use num_traits::ToPrimitive;
+
+use crate::base::db_from_power;
+use crate::modulator::{ModulatorConfig, ModulatorError, phase_numerators, start, transient};
+
+use super::channel::Legal;
+use super::placement::{Placement, place};
+use super::result::ChannelResult;
+use super::setup::{AssessError, Setup};
+
+/// Outputs generated at a time.
+const BLOCK: usize = 1 << 14;
+
+impl Setup<'_> {
+    /// Returns the difference between the first in-loop line of the shared curve and the same line summed over the
+    /// whole exact period \[dB\]; `None` where there is no such line above its own noise.
+    ///
+    /// # Errors
+    /// As for the channel itself.
+    pub fn whole_period_difference_db(&self, channel: &ChannelResult) -> Result<Option<f64>, AssessError> {
+        let Some(period) = channel.period.as_ref().and_then(ToPrimitive::to_u64) else { return Ok(None) };
+        let group = &self.plan().groups[channel.group_index];
+        let placement = place(self.plan(), group, channel.channel)?;
+        let legal = Legal { setup: self, group, channel: channel.channel, placement: &placement };
+        let mut scratch = self.scratch();
+        let Some((family, lines)) = legal.lines(channel.pfd_hz, &mut scratch)? else { return Ok(None) };
+        let (Some(curve), Some(offset_cycles)) = (legal.charge_curve(), lines.rest_cycles) else { return Ok(None) };
+        let Some((tone, line)) = family.iter().zip(&lines.family).next() else { return Ok(None) };
+        if line.uncertainty_db.is_none() {
+            return Ok(None);
+        }
+        let expected = (line.modulator + line.nonlinearity.unwrap_or_default()).norm();
+        let found =
+            correlate_period(&placement, period, tone.residue.unsigned_abs(), |phase| curve.at(phase + offset_cycles))
+                .map_err(|source| AssessError::Lines { channel: channel.channel, source: source.into() })?;
+        if expected <= 0.0 || found.norm() <= 0.0 {
+            return Ok(None);
+        }
+        let ratio = found.norm() / expected;
+        Ok(Some(db_from_power(ratio * ratio).abs()))
+    }
+}
+
+/// Returns the line at `residue`/M over one whole period of g(ψ).
+fn correlate_period(
+    placement: &Placement,
+    period: u64,
+    residue: u64,
+    charge: impl Fn(f64) -> f64,
+) -> Result<Complex64, ModulatorError> {
+    let config = &placement.modulator;
+    let modulus = config.modulus().get();
+    let scale = 1.0 / modulus as f64;
+    let mean = mean_phase(config, period)?;
+    let mut sum = Complex64::ZERO;
+    let mut turn: u64 = 0;
+    for_each_phase(config, period, |numerator| {
+        let angle = -TAU * (turn as f64 * scale);
+        sum += Complex64::cis(angle) * charge(numerator as f64 * scale - mean);
+        turn += residue;
+        if turn >= modulus {
+            turn -= modulus;
+        }
+    })?;
+    Ok(sum / period as f64)
+}
+
+/// Returns the mean of φ over a period, from exact integer sums.
+fn mean_phase(config: &ModulatorConfig, period: u64) -> Result<f64, ModulatorError> {
+    let mut sum: i128 = 0;
+    for_each_phase(config, period, |numerator| sum += i128::from(numerator))?;
+    Ok(sum as f64 / (period as f64 * config.modulus().get() as f64))
+}
+
+/// Calls `take` with M·φ of each cycle of the period after the transient.
+fn for_each_phase(config: &ModulatorConfig, period: u64, mut take: impl FnMut(i64)) -> Result<(), ModulatorError> {
+    let mut modulator = start(config);
+    let skipped = transient(config);
+    let mut outputs = vec![0; BLOCK];
+    let mut numerators = vec![0; BLOCK];
+    let mut before = 0i64;
+    let mut first = true;
+    let mut left = period;
+    while left > 0 {
+        let size = if first { skipped } else { left.min(BLOCK as u64).to_usize().unwrap_or(BLOCK) };
+        modulator.fill(&mut outputs[..size]);
+        phase_numerators(&outputs[..size], config.k(), config.modulus(), &mut numerators[..size])?;
+        if !first {
+            numerators[..size].iter().for_each(|numerator| take(before + numerator));
+            left -= size as u64;
+        }
+        before += if size == 0 { 0 } else { numerators[size - 1] };
+        first = false;
+    }
+    Ok(())
+}

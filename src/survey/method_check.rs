@@ -1,0 +1,38 @@
+//! The run's own check: lines from the shared curve against direct correlation over the whole exact period.
+
+use num_traits::ToPrimitive;
+
+use crate::assess::{AssessError, ChannelResult, Method, Setup};
+
+use super::result::MethodCheck;
+
+/// Channels checked in every run.
+const CHECKED_CHANNELS: usize = 4;
+/// Longest period that is correlated whole: a fraction of a second.
+const LONGEST_PERIOD: u64 = 1 << 25;
+
+/// Returns the check over a few channels spread over the plan, among those whose levels come from the shared curve and
+/// whose exact period can be run whole.
+///
+/// # Errors
+/// `AssessError` as for the channels themselves.
+pub fn check_method(setup: &Setup, channels: &[ChannelResult]) -> Result<MethodCheck, AssessError> {
+    let eligible: Vec<&ChannelResult> = channels
+        .iter()
+        .filter(|channel| channel.method == Method::SharedCurve && channel.period_is_exact)
+        .filter(|channel| {
+            channel.period.as_ref().and_then(ToPrimitive::to_u64).is_some_and(|period| period <= LONGEST_PERIOD)
+        })
+        .collect();
+    let count = eligible.len().min(CHECKED_CHANNELS);
+    let mut check = MethodCheck::default();
+    for i in 0..count {
+        let channel = eligible[i * eligible.len() / count];
+        if let Some(difference_db) = setup.whole_period_difference_db(channel)? {
+            check.channels += 1;
+            let worst = check.worst_difference_db.unwrap_or(0.0).max(difference_db);
+            check.worst_difference_db = Some(worst);
+        }
+    }
+    Ok(check)
+}
