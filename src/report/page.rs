@@ -48,6 +48,7 @@ struct Page<'a> {
     sentence: String,
     cause: Option<String>,
     shares: Vec<Share>,
+    doubtful: Option<String>,
     worst: Vec<Row>,
     plots: &'a [Plot],
     rows: Vec<Row>,
@@ -86,6 +87,7 @@ pub(crate) fn page(result: &SurveyResult, options: &RenderOptions, plots: &[Plot
         sentence: sentence(result),
         cause: cause(result),
         shares: shares(result),
+        doubtful: doubtful(result),
         worst: flagged(WORST).map(|channel| row(channel, 3)).collect(),
         plots,
         rows_note: rows_note(result, options.detail, rows.len()),
@@ -196,6 +198,13 @@ fn shares(result: &SurveyResult) -> Vec<Share> {
             share
         })
         .collect()
+}
+
+/// Returns how many channels carry doubts of their own.
+fn doubtful(result: &SurveyResult) -> Option<String> {
+    let number = result.channels.iter().filter(|channel| !channel.warnings.is_empty()).count();
+    let carry = if number == 1 { "channel carries a doubt of its own" } else { "channels carry doubts of their own" };
+    (number > 0).then(|| format!("{} {carry}: see “warnings” in channels.csv.", count(number as u64)))
 }
 
 fn rows_note(result: &SurveyResult, detail: Detail, shown: usize) -> String {

@@ -281,9 +281,12 @@ fn channel(group_index: usize, group: &ChannelGroup, index: u64, dice: &mut Dice
     let divider = group.output_dividers[0];
     let vco_hz = output.to_f64_hz() * divider as f64;
     let m = 1u64 << 24;
-    let ratio = vco_hz / PFD_HZ;
-    let n = ratio.floor() as u64;
-    let k = ((ratio - ratio.floor()) * m as f64).round() as u64;
+    let cycles = Exact::new(i128::from(divider), 19_200_000).expect("not zero");
+    let ratio = output.hz().times(&cycles).expect("small");
+    let n = u64::try_from(ratio.floor()).expect("positive");
+    let rest = ratio.minus(&Exact::from_integer(ratio.floor())).expect("small");
+    let k = rest.times(&Exact::from_integer(i128::from(m))).expect("small").round_half_even();
+    let k = u64::try_from(k).expect("positive");
     let tones = tones(k, m, &group.limits, dice);
     let reasons = reasons(&tones, k, m, group.limits.margin_db);
     let verdict = reasons.iter().map(|reason| reason.rule.verdict()).max().unwrap_or(Verdict::Clear);
