@@ -229,6 +229,15 @@ pub struct Tone {
     pub margin_db: Option<f64>,
     /// Offset ≤ loop edge.
     pub inside_loop: bool,
+    /// Offset ≤ guard (exact where the guard is).
+    #[serde(skip)]
+    pub inside_guard: bool,
+    /// Made after the loop (`output` family): its unknown level is at most marginal.
+    #[serde(skip)]
+    pub after_loop: bool,
+    /// `h·K mod± M`, signed, for tones of the modulator family.
+    #[serde(skip)]
+    pub residue: Option<i64>,
     /// Names of the applicable parts that are unknown (`coupling`, `nonlinearity`, …), each with its reason.
     pub unknown: Vec<String>,
 }

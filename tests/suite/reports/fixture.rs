@@ -195,6 +195,9 @@ fn coupled(harmonic: u64, offset_hz: f64, mask: &Limits, known: bool, dice: &mut
         limit_dbc: limit,
         margin_db: limit.map(|limit| limit - judged),
         inside_loop: offset_hz <= 61e3,
+        inside_guard: offset_hz <= 1e5,
+        after_loop: false,
+        residue: None,
         unknown: if known { Vec::new() } else { vec![format!("coupling: no anchor for q = {harmonic}")] },
     }
 }
@@ -216,6 +219,9 @@ fn bare(origin: Origin, label: &str, offset_hz: f64, level_dbc: Option<f64>, mas
         limit_dbc: limit,
         margin_db: limit.zip(level_dbc).map(|(limit, level)| limit - level),
         inside_loop: offset_hz <= 61e3,
+        inside_guard: offset_hz <= 1e5,
+        after_loop: false,
+        residue: None,
         unknown: if level_dbc.is_none() { vec!["leakage: not given".into()] } else { Vec::new() },
     }
 }
