@@ -2,8 +2,9 @@
 
 use std::cmp::Ordering;
 
+use super::columns::rules_fired;
 use super::figures::{decibel, significant, with_prefix};
-use crate::assess::{ChannelResult, Tone, Verdict};
+use crate::assess::{ChannelResult, Rule, Tone, Verdict};
 
 /// Longest free text of a table cell, in characters.
 const CELL_CHARS: usize = 160;
@@ -89,7 +90,7 @@ pub(crate) fn row(channel: &ChannelResult, reasons: usize) -> Row {
         limit: shown(&|tone| tone.limit_dbc.map_or_else(|| "none".to_owned(), decibel)),
         margin: shown(&margin_text),
         phase: phase_text(channel),
-        rules: channel.reasons.iter().map(|reason| reason.rule.name()).collect::<Vec<_>>().join(" "),
+        rules: rules_text(channel),
         reasons: channel
             .reasons
             .iter()
@@ -99,6 +100,15 @@ pub(crate) fn row(channel: &ChannelResult, reasons: usize) -> Row {
         more_reasons: channel.reasons.len().saturating_sub(reasons),
         doubts: channel.warnings.iter().take(1).map(|doubt| shortened(doubt, CELL_CHARS)).collect(),
     }
+}
+
+/// Returns the rules that fired, with how often: `B2 ×5 M2`.
+fn rules_text(channel: &ChannelResult) -> String {
+    let shown = |(rule, often): (Rule, usize)| match often {
+        1 => rule.name().to_owned(),
+        _ => format!("{} ×{often}", rule.name()),
+    };
+    rules_fired(channel).into_iter().map(shown).collect::<Vec<_>>().join(" ")
 }
 
 fn word_text(channel: &ChannelResult) -> String {
