@@ -301,3 +301,39 @@ fn refuses_figures_that_are_not_finite_and_names_them() {
 fn the_same_result_gives_the_same_bytes() {
     assert_eq!(render(&fixture::survey(50), &ALL).unwrap(), render(&fixture::survey(50), &ALL).unwrap());
 }
+
+/// Asserts that two values have the same shape and, within the stated rounding, the same figures; returns their number.
+fn assert_same(ours: &Value, usual: &Value, at: &str) -> usize {
+    match (ours, usual) {
+        (Value::Object(a), Value::Object(b)) => {
+            assert_eq!(a.keys().collect::<Vec<_>>(), b.keys().collect::<Vec<_>>(), "{at}");
+            a.iter().map(|(key, value)| assert_same(value, &b[key], key)).sum()
+        }
+        (Value::Array(a), Value::Array(b)) => {
+            assert_eq!(a.len(), b.len(), "{at}");
+            a.iter().zip(b).map(|(a, b)| assert_same(a, b, at)).sum()
+        }
+        (Value::Number(a), Value::Number(b)) => {
+            let (a, b) = (a.as_f64().unwrap(), b.as_f64().unwrap());
+            // Half a unit of the fourth decimal for decibels, of the tenth digit for everything else.
+            let slack = if at.contains("_db") { 0.5e-4 + 1e-12 } else { 5e-10 * b.abs() };
+            assert!((a - b).abs() <= slack, "{at}: {a} {b}");
+            1
+        }
+        (a, b) => {
+            assert_eq!(a, b, "{at}");
+            0
+        }
+    }
+}
+
+#[test]
+fn survey_json_agrees_with_the_usual_writer_but_for_rounding() {
+    let result = fixture::survey(60);
+    let json = json(&render(&result, &ALL).unwrap());
+    let mut figures = assert_same(&json["plan"], &serde_json::to_value(&result.plan).unwrap(), "plan");
+    for (written, channel) in json["channels"].as_array().unwrap().iter().zip(&result.channels) {
+        figures += assert_same(written, &serde_json::to_value(channel).unwrap(), "channel");
+    }
+    assert!(figures > 5000, "{figures} figures compared");
+}

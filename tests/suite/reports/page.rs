@@ -3,7 +3,7 @@
 use serde_json::Value;
 use thornmap::report::render;
 
-use super::{ALL, fixture, json, text, worst_tone};
+use super::{ALL, FLAGGED, fixture, json, text, worst_tone};
 
 /// Returns the text of a piece of markup: tags removed, character references undone.
 fn plain(markup: &str) -> String {
@@ -280,4 +280,12 @@ fn large_plans_stay_small_and_say_what_is_left_out() {
     assert!(html.len() < 3_000_000, "{} bytes", html.len());
     assert_eq!(table_rows(&html).len(), 2_000);
     assert!(html.contains("The worst 2\u{202f}000 of 20\u{202f}001 channels; channels.csv holds all 20\u{202f}001."));
+}
+
+#[test]
+fn flagged_detail_shows_only_flagged_rows_and_the_command_that_made_it() {
+    let result = fixture::survey(200);
+    let html = text(&render(&result, &FLAGGED).unwrap(), "report.html");
+    assert_eq!(table_rows(&html).len() as u64, result.summary.bad + result.summary.marginal);
+    assert!(html.contains("thornmap survey petrel.toml --detail flagged"));
 }

@@ -94,6 +94,15 @@ fn refuses_a_folder_that_is_not_ours_and_leaves_it_alone() {
     assert_eq!(fs::read_to_string(&file).unwrap(), "text");
 }
 
+#[cfg(target_os = "linux")]
+#[test]
+fn says_so_where_nothing_can_be_written() {
+    // No user, not even the administrator, makes folders among the processes.
+    let error = write_set(Path::new("/proc/thornmap/set"), &small("report.html", "x")).unwrap_err();
+    assert!(matches!(error, ReportError::Io { action: "created", .. }), "{error}");
+    assert!(error.to_string().ends_with("what was there before is untouched"), "{error}");
+}
+
 #[test]
 fn keeps_the_old_set_when_the_new_one_cannot_be_written() {
     let home = tempfile::tempdir().unwrap();
