@@ -5,7 +5,7 @@ use serde::Serialize;
 use super::ReportError;
 use super::figures::figure_text;
 use super::json::json_text;
-use crate::assess::{ChannelResult, Tone};
+use crate::assess::{ChannelResult, Rule, Tone};
 
 /// What a cell holds; unknown is an empty cell.
 #[derive(Debug, Clone, PartialEq)]
@@ -58,6 +58,12 @@ fn worst(channel: &ChannelResult, cell: impl Fn(&Tone) -> Cell) -> Cell {
 
 fn nearest(channel: &ChannelResult, cell: impl Fn(&crate::assess::BoundaryNear) -> Cell) -> Cell {
     channel.boundary.as_ref().map_or(Cell::Empty, cell)
+}
+
+/// Returns each rule that fired, once, with how often it did, in the order of the rules.
+pub(crate) fn rules_fired(channel: &ChannelResult) -> Vec<(Rule, usize)> {
+    let often = |rule: &Rule| channel.reasons.iter().filter(|reason| reason.rule == *rule).count();
+    Rule::ALL.into_iter().map(|rule| (rule, often(&rule))).filter(|(_, often)| *often > 0).collect()
 }
 
 macro_rules! columns {
@@ -132,7 +138,7 @@ columns! {
     "residual_fm_hz" => |c| figure(c.residual_fm_hz);
     "evm_percent" => |c| figure(c.evm_percent);
     "verdict" => |c| text(c.verdict.word());
-    "rules" => |c| joined(&c.reasons, |reason| reason.rule.name().to_owned(), " ");
+    "rules" => |c| joined(rules_fired(c), |(rule, _)| rule.name().to_owned(), " ");
     "reasons" => |c| joined(&c.reasons, |reason| reason.text.clone(), "; ");
     "warnings" => |c| joined(&c.warnings, String::clone, "; ");
 }

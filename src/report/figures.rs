@@ -3,13 +3,12 @@
 use super::ReportError;
 
 /// Keys of frequencies that come from exact arithmetic: every machine finds the same double, so none is rounded.
-const EXACT_KEYS: [&str; 13] = [
+const EXACT_KEYS: [&str; 12] = [
     "channel_hz",
     "injection_hz",
     "output_hz",
     "achieved_hz",
     "error_hz",
-    "error_ppb",
     "vco_hz",
     "reference_hz",
     "pfd_hz",

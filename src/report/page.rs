@@ -19,6 +19,15 @@ pub(crate) const MOST_ROWS: usize = 2_000;
 /// Worst channels that are told in words.
 const WORST: usize = 5;
 
+/// Conventions that hold for every report; the result adds those of its engines.
+const CONVENTIONS: [(&str, &str); 5] = [
+    ("level", "dBc at the output, single sideband; the parts of a tone add as voltages, the worst case"),
+    ("offset", "from the carrier, in hertz; an output divider leaves it as it is"),
+    ("guard", "acts on the tone offset, not on the distance of the oscillator; inclusive, as is the loop edge"),
+    ("margin", "limit minus level; positive passes"),
+    ("unknown", "a figure that cannot be known from the plan; no figure stands in for it"),
+];
+
 /// One verdict with its count and its part of the bar of 1000 units.
 struct Share {
     word: &'static str,
@@ -48,6 +57,7 @@ struct Page<'a> {
     sentence: String,
     cause: Option<String>,
     shares: Vec<Share>,
+    doubtful: Option<String>,
     worst: Vec<Row>,
     plots: &'a [Plot],
     rows: Vec<Row>,
@@ -56,7 +66,8 @@ struct Page<'a> {
     assumed: Vec<&'a Assumption>,
     loop_lines: Vec<(&'static str, String)>,
     rules: Vec<RuleLine>,
-    conventions: &'a [(&'static str, &'static str)],
+    page_conventions: Vec<(&'static str, &'static str)>,
+    conventions: Vec<(String, &'static str)>,
     warnings: &'a [String],
     check: String,
     plan_sha256: &'a str,
@@ -86,6 +97,7 @@ pub(crate) fn page(result: &SurveyResult, options: &RenderOptions, plots: &[Plot
         sentence: sentence(result),
         cause: cause(result),
         shares: shares(result),
+        doubtful: doubtful(result),
         worst: flagged(WORST).map(|channel| row(channel, 3)).collect(),
         plots,
         rows_note: rows_note(result, options.detail, rows.len()),
@@ -94,7 +106,8 @@ pub(crate) fn page(result: &SurveyResult, options: &RenderOptions, plots: &[Plot
         assumed,
         loop_lines: loop_lines(&result.loop_summary),
         rules: rules(result),
-        conventions: &result.conventions,
+        page_conventions: page_conventions(result),
+        conventions: result.conventions.iter().map(|(name, text)| (name.replace('_', " "), *text)).collect(),
         warnings: &result.warnings,
         check: check(result),
         plan_sha256: &result.plan.sha256,
@@ -124,6 +137,12 @@ fn base64(bytes: &[u8]) -> String {
         }
     }
     text
+}
+
+/// Returns the page's conventions that the result does not state in its own words.
+fn page_conventions(result: &SurveyResult) -> Vec<(&'static str, &'static str)> {
+    let stated = |name: &str| result.conventions.iter().any(|(own, _)| own.trim_end_matches('s') == name);
+    CONVENTIONS.into_iter().filter(|(name, _)| !stated(name)).collect()
 }
 
 fn identity(result: &SurveyResult) -> Vec<(&'static str, String)> {
@@ -198,6 +217,13 @@ fn shares(result: &SurveyResult) -> Vec<Share> {
         .collect()
 }
 
+/// Returns how many channels carry doubts of their own.
+fn doubtful(result: &SurveyResult) -> Option<String> {
+    let number = result.channels.iter().filter(|channel| !channel.warnings.is_empty()).count();
+    let carry = if number == 1 { "channel carries a doubt of its own" } else { "channels carry doubts of their own" };
+    (number > 0).then(|| format!("{} {carry}: see “warnings” in channels.csv.", count(number as u64)))
+}
+
 fn rows_note(result: &SurveyResult, detail: Detail, shown: usize) -> String {
     let number = |value: usize| count(value as u64);
     let matching = result.channels.iter().filter(|channel| listed(channel, detail)).count();
@@ -223,14 +249,14 @@ fn loop_lines(summary: &LoopSummary) -> Vec<(&'static str, String)> {
         None => lines.push(("Filter", "a measured response, no components".to_owned())),
         Some(parts) => {
             if let Some(c1) = parts.c1_farad {
-                lines.push(("C1", with_prefix(c1, "F", 4)));
+                lines.push(("C1", with_prefix(c1, "F", 5)));
             }
-            lines.push(("R2", with_prefix(parts.r2_ohm, "Ω", 4)));
-            lines.push(("C2", with_prefix(parts.c2_farad, "F", 4)));
+            lines.push(("R2", with_prefix(parts.r2_ohm, "Ω", 5)));
+            lines.push(("C2", with_prefix(parts.c2_farad, "F", 5)));
             for (names, pair) in [(("R3", "C3"), parts.r3_c3), (("R4", "C4"), parts.r4_c4)] {
                 if let Some((r, c)) = pair {
-                    lines.push((names.0, with_prefix(r, "Ω", 4)));
-                    lines.push((names.1, with_prefix(c, "F", 4)));
+                    lines.push((names.0, with_prefix(r, "Ω", 5)));
+                    lines.push((names.1, with_prefix(c, "F", 5)));
                 }
             }
         }

@@ -2,8 +2,9 @@
 
 use std::cmp::Ordering;
 
+use super::columns::rules_fired;
 use super::figures::{decibel, significant, with_prefix};
-use crate::assess::{ChannelResult, Tone, Verdict};
+use crate::assess::{ChannelResult, Rule, Tone, Verdict};
 
 /// Longest free text of a table cell, in characters.
 const CELL_CHARS: usize = 160;
@@ -24,12 +25,14 @@ pub(crate) struct Row {
     pub tone: String,
     pub offset: String,
     pub level: String,
+    pub known: Option<String>,
     pub limit: String,
     pub margin: String,
     pub phase: String,
     pub rules: String,
     pub reasons: Vec<String>,
     pub more_reasons: usize,
+    pub doubts: Vec<String>,
 }
 
 /// Returns the positions of the channels, worst first: no legal word, then by verdict and smallest margin of the worst
@@ -68,10 +71,6 @@ pub(crate) fn mark_of(verdict: Verdict) -> &'static str {
     }
 }
 
-fn unknown_or(value: Option<f64>, show: impl Fn(f64) -> String) -> String {
-    value.map_or_else(|| UNKNOWN.to_owned(), show)
-}
-
 /// Returns a channel as text with at most `reasons` reasons.
 pub(crate) fn row(channel: &ChannelResult, reasons: usize) -> Row {
     let tone = channel.worst_tone();
@@ -87,10 +86,11 @@ pub(crate) fn row(channel: &ChannelResult, reasons: usize) -> Row {
         tone: shown(&|tone| shortened(&tone.label, 60)),
         offset: shown(&|tone| with_prefix(tone.offset_hz, "Hz", 6)),
         level: shown(&level_text),
+        known: tone.and_then(known_text),
         limit: shown(&|tone| tone.limit_dbc.map_or_else(|| "none".to_owned(), decibel)),
         margin: shown(&margin_text),
         phase: phase_text(channel),
-        rules: channel.reasons.iter().map(|reason| reason.rule.name()).collect::<Vec<_>>().join(" "),
+        rules: rules_text(channel),
         reasons: channel
             .reasons
             .iter()
@@ -98,7 +98,17 @@ pub(crate) fn row(channel: &ChannelResult, reasons: usize) -> Row {
             .map(|reason| format!("{} {}", reason.rule.name(), shortened(&reason.text, CELL_CHARS)))
             .collect(),
         more_reasons: channel.reasons.len().saturating_sub(reasons),
+        doubts: channel.warnings.iter().take(1).map(|doubt| shortened(doubt, CELL_CHARS)).collect(),
     }
+}
+
+/// Returns the rules that fired, with how often: `B2 ×5 M2`.
+fn rules_text(channel: &ChannelResult) -> String {
+    let shown = |(rule, often): (Rule, usize)| match often {
+        1 => rule.name().to_owned(),
+        _ => format!("{} ×{often}", rule.name()),
+    };
+    rules_fired(channel).into_iter().map(shown).collect::<Vec<_>>().join(" ")
 }
 
 fn word_text(channel: &ChannelResult) -> String {
@@ -112,16 +122,20 @@ fn word_text(channel: &ChannelResult) -> String {
 fn boundary_text(channel: &ChannelResult) -> String {
     match &channel.boundary {
         None => "–".to_owned(),
-        Some(near) => format!("{}/{} at {}", near.p, near.q, with_prefix(near.tone_offset_hz, "Hz", 6)),
+        Some(near) => {
+            let family = if near.family == "comparison" { String::new() } else { format!(" ({})", near.family) };
+            format!("{}/{}{family}: {}", near.p, near.q, with_prefix(near.tone_offset_hz, "Hz", 6))
+        }
     }
 }
 
 fn level_text(tone: &Tone) -> String {
-    match (tone.level_dbc, tone.known_level_dbc) {
-        (Some(level), _) => decibel(level),
-        (None, Some(known)) => format!("{UNKNOWN}, known part {}", decibel(known)),
-        (None, None) => UNKNOWN.to_owned(),
-    }
+    tone.level_dbc.map_or_else(|| UNKNOWN.to_owned(), decibel)
+}
+
+/// Returns the known part of a level that is not known in full.
+fn known_text(tone: &Tone) -> Option<String> {
+    tone.known_level_dbc.filter(|_| tone.level_dbc.is_none()).map(decibel)
 }
 
 /// A margin of the known part only bounds the true one: more level can only take margin away.
@@ -137,6 +151,6 @@ fn phase_text(channel: &ChannelResult) -> String {
     match (channel.phase_error_with_tones_deg, channel.phase_error_known_deg) {
         (Some(phase), _) => significant(phase, 4),
         (None, Some(known)) => format!("≥ {}", significant(known, 4)),
-        (None, None) => unknown_or(None, |_| String::new()),
+        (None, None) => UNKNOWN.to_owned(),
     }
 }

@@ -3,7 +3,7 @@
 use std::collections::BTreeSet;
 
 use super::Plot;
-use super::frame::{Axis, ChannelAxis, Frame, Hold, ROOM, plot};
+use super::frame::{Axis, ChannelAxis, Frame, Hold, ROOM, plot, round_step};
 use crate::assess::{ChannelResult, Verdict};
 use crate::report::ReportError;
 use crate::report::figures::count;
@@ -18,12 +18,17 @@ const HEIGHT: u32 = 380;
 pub(super) fn boundaries(result: &SurveyResult) -> Result<Option<Plot>, ReportError> {
     let channels = &result.channels;
     let offsets: Vec<f64> = channels.iter().filter_map(offset_hz).collect();
+    if offsets.is_empty() {
+        return Ok(None);
+    }
     let lines: Vec<f64> =
         channels.iter().flat_map(|channel| [channel.guard_hz, channel.loop_edge_hz]).flatten().collect();
     let smallest = |figures: &[f64]| figures.iter().copied().filter(|hz| *hz > 0.0).fold(f64::INFINITY, f64::min);
     let high = offsets.iter().chain(&lines).copied().fold(0.0, f64::max);
     // Far inside guard and loop the exact depth matters no more; it would only press the rest together.
-    let low = (smallest(&offsets) / 1.3).min(smallest(&lines) / 3.0).max(smallest(&lines) / 300.0);
+    let depth = round_step(smallest(&lines) / 600.0);
+    let wanted = (smallest(&offsets) / 1.3).min(smallest(&lines) / 3.0);
+    let low = if wanted >= depth || !depth.is_finite() { wanted } else { depth };
     let held = offsets.iter().filter(|hz| **hz < low).count();
     let Some(mut y) = Axis::log_hz(low, high * 1.3, "tone offset from the carrier") else { return Ok(None) };
     y.mark_held(held > 0);

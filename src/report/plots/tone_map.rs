@@ -1,7 +1,7 @@
 //! The strongest tone in every stretch of channel and offset.
 
 use super::Plot;
-use super::frame::{Axis, ChannelAxis, Frame, Hold, ROOM, Room, plot};
+use super::frame::{Axis, ChannelAxis, Frame, Hold, ROOM, Room, plot, round_step};
 use crate::report::ReportError;
 use crate::report::paint::{LEVEL_STEPS, Paint};
 use crate::survey::SurveyResult;
@@ -43,7 +43,7 @@ pub(super) fn tone_map(result: &SurveyResult) -> Result<Option<Plot>, ReportErro
     let (low, high) = offsets.fold((f64::INFINITY, 0.0f64), |(low, high), hz| (low.min(hz), high.max(hz)));
     let edge = result.channels.iter().filter_map(|channel| channel.loop_edge_hz).fold(f64::INFINITY, f64::min);
     // Tones far below the loop edge share the lowest row, so that a single one does not press the rest together.
-    let floor = if edge.is_finite() { (low / 1.1).max(edge / 1000.0) } else { low / 1.1 };
+    let floor = if edge.is_finite() { (low / 1.1).max(round_step(edge / 1500.0)) } else { low / 1.1 };
     let Some(mut y) = Axis::log_hz(floor, high * 1.1, "offset from the carrier") else { return Ok(None) };
     y.mark_held(low < floor);
     let Some(along) = ChannelAxis::new(&result.channels) else { return Ok(None) };

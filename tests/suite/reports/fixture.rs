@@ -195,6 +195,9 @@ fn coupled(harmonic: u64, offset_hz: f64, mask: &Limits, known: bool, dice: &mut
         limit_dbc: limit,
         margin_db: limit.map(|limit| limit - judged),
         inside_loop: offset_hz <= 61e3,
+        inside_guard: offset_hz <= 1e5,
+        after_loop: false,
+        residue: None,
         unknown: if known { Vec::new() } else { vec![format!("coupling: no anchor for q = {harmonic}")] },
     }
 }
@@ -216,6 +219,9 @@ fn bare(origin: Origin, label: &str, offset_hz: f64, level_dbc: Option<f64>, mas
         limit_dbc: limit,
         margin_db: limit.zip(level_dbc).map(|(limit, level)| limit - level),
         inside_loop: offset_hz <= 61e3,
+        inside_guard: offset_hz <= 1e5,
+        after_loop: false,
+        residue: None,
         unknown: if level_dbc.is_none() { vec!["leakage: not given".into()] } else { Vec::new() },
     }
 }
@@ -281,9 +287,12 @@ fn channel(group_index: usize, group: &ChannelGroup, index: u64, dice: &mut Dice
     let divider = group.output_dividers[0];
     let vco_hz = output.to_f64_hz() * divider as f64;
     let m = 1u64 << 24;
-    let ratio = vco_hz / PFD_HZ;
-    let n = ratio.floor() as u64;
-    let k = ((ratio - ratio.floor()) * m as f64).round() as u64;
+    let cycles = Exact::new(i128::from(divider), 19_200_000).expect("not zero");
+    let ratio = output.hz().times(&cycles).expect("small");
+    let n = u64::try_from(ratio.floor()).expect("positive");
+    let rest = ratio.minus(&Exact::from_integer(ratio.floor())).expect("small");
+    let k = rest.times(&Exact::from_integer(i128::from(m))).expect("small").round_half_even();
+    let k = u64::try_from(k).expect("positive");
     let tones = tones(k, m, &group.limits, dice);
     let reasons = reasons(&tones, k, m, group.limits.margin_db);
     let verdict = reasons.iter().map(|reason| reason.rule.verdict()).max().unwrap_or(Verdict::Clear);
