@@ -1,11 +1,30 @@
 //! The plan file, read and checked: after this stage nothing can be malformed.
 
+mod channels;
 mod checked;
+mod choices;
+mod example;
+mod file;
+mod hardware;
+pub mod keys;
 mod locate;
+mod modulation;
+mod parse;
+mod problem;
+mod reader;
+mod schema;
+mod spurs;
+mod tables;
 
 pub use crate::loop_model::OscillatorNoise;
 pub use crate::tones::Mechanism;
+pub use channels::MOST_CHANNELS;
 pub use checked::{
     Alternatives, Analysis, Anchor, AnchorPlace, Boundary, ChannelGroup, ChannelList, Clock, Detector, Divider, Gain,
     Guard, Identity, Limits, LoopEdge, LoopPlan, Mask, MismatchPoints, ModulatorPlan, Oscillator, Plan, Reference,
 };
+pub use example::example_plan;
+pub use file::{demo_plan, read_plan_file};
+pub use parse::parse_plan;
+pub use problem::{Colour, PlanFailure, PlanProblem, render_problems};
+pub use schema::json_schema;

@@ -1,0 +1,84 @@
+//! Title block, alternatives and analysis.
+
+use crate::base::Frequency;
+
+use super::checked::{Alternatives, Analysis, Identity, ModulatorPlan, Reference};
+use super::modulation::dither_value;
+use super::reader::{Reader, Section, describe};
+use super::spurs::DEFAULT_SPAN_HZ;
+
+/// Record length when the plan gives none.
+const DEFAULT_RECORD: u64 = 131_072;
+/// Tone floor when the plan gives none \[dBc\].
+const DEFAULT_TONE_FLOOR_DBC: f64 = -120.0;
+
+/// Reads `[plan]`.
+pub fn identity(reader: &mut Reader, section: &Section, stem: &str) -> Identity {
+    let mut text = |name| reader.text(section, name).map(|found| found.value);
+    Identity {
+        title: text("title").unwrap_or_else(|| stem.to_owned()),
+        revision: text("revision"),
+        prepared_by: text("prepared_by"),
+        checked_by: text("checked_by"),
+        approved_by: text("approved_by"),
+        date: text("date"),
+        notes: text("notes"),
+    }
+}
+
+/// Reads `[analysis]`.
+pub fn analysis(reader: &mut Reader, section: &Section, pfd_hz: Option<f64>) -> Analysis {
+    let record = reader.whole(section, "record").map_or(DEFAULT_RECORD, |found| found.value);
+    let default_span = DEFAULT_SPAN_HZ.min(pfd_hz.map_or(f64::INFINITY, |pfd| pfd / 2.0));
+    let span_hz = reader.real(section, "span").unwrap_or(default_span);
+    let tone_floor_dbc = reader.real(section, "tone_floor").unwrap_or(DEFAULT_TONE_FLOOR_DBC);
+    Analysis { record, span_hz, tone_floor_dbc }
+}
+
+/// Reads `[alternatives]`; what is absent is the plan's own value.
+pub fn alternatives(reader: &mut Reader, section: &Section, own: Option<(&Reference, &ModulatorPlan)>) -> Alternatives {
+    let frequencies = |found: Option<super::reader::Located<Vec<crate::base::Exact>>>| {
+        found.map(|found| found.value.into_iter().map(Frequency::from_hz).collect::<Vec<_>>())
+    };
+    let references = frequencies(reader.quantities(section, "references"));
+    let dividers = reader.wholes(section, "dividers").map(|found| found.value);
+    let doubler = flags(reader, section);
+    let orders = reader
+        .wholes(section, "orders")
+        .map(|found| found.value.into_iter().filter_map(|order| u8::try_from(order).ok()).collect::<Vec<_>>());
+    let dithers = reader.plain(section, "dithers").and_then(|value| {
+        let path = section.key("dithers");
+        let items = reader.items(&path, value)?;
+        items.into_iter().map(|item| dither_value(reader, &path, item)).collect::<Option<Vec<_>>>()
+    });
+    let injections = frequencies(reader.quantities(section, "injections")).unwrap_or_default();
+    let nudge = reader.frequency(section, "nudge").map_or(Frequency::from_whole_hz(0), |found| found.value);
+    let reference = own.map(|(reference, _)| reference);
+    let modulator = own.map(|(_, modulator)| modulator);
+    Alternatives {
+        references: references.unwrap_or_else(|| reference.map(|own| own.frequency).into_iter().collect()),
+        dividers: dividers.unwrap_or_else(|| reference.map(|own| own.divider).into_iter().collect()),
+        doubler: doubler.unwrap_or_else(|| reference.map(|own| own.doubler).into_iter().collect()),
+        orders: orders.unwrap_or_else(|| modulator.map(|own| own.settings.order).into_iter().collect()),
+        dithers: dithers.unwrap_or_else(|| modulator.map(|own| own.settings.dither).into_iter().collect()),
+        injections,
+        nudge,
+    }
+}
+
+fn flags(reader: &mut Reader, section: &Section) -> Option<Vec<bool>> {
+    let value = reader.plain(section, "doubler")?;
+    let path = section.key("doubler");
+    let mut flags = Vec::new();
+    for item in reader.items(&path, value)? {
+        match item.get_ref().as_bool() {
+            Some(flag) => flags.push(flag),
+            None => {
+                let text = format!("found {}, expected true or false", describe(item.get_ref()));
+                reader.problem(&path, &item.span(), text);
+                return None;
+            }
+        }
+    }
+    Some(flags)
+}
