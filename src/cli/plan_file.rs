@@ -3,7 +3,7 @@
 use std::io::IsTerminal;
 use std::path::Path;
 
-use crate::plan::{Plan, PlanFailure, read_plan_file, render_problems};
+use crate::plan::{Colour, Plan, PlanFailure, read_plan_file, render_problems};
 
 use super::failure::Failure;
 use super::output;
@@ -16,7 +16,8 @@ pub fn read(path: &Path) -> Result<Plan, Failure> {
     read_plan_file(path).map_err(|failure| match failure {
         PlanFailure::Io { .. } => Failure::InputOutput(format!("error: {failure}")),
         PlanFailure::Content { problems, source_name, text } => {
-            let colour = std::io::stderr().is_terminal() && std::env::var_os("NO_COLOR").is_none();
+            let in_colour = std::io::stderr().is_terminal() && std::env::var_os("NO_COLOR").is_none();
+            let colour = if in_colour { Colour::Styled } else { Colour::Plain };
             Failure::Content(render_problems(&problems, &source_name, &text, colour))
         }
     })

@@ -4,7 +4,7 @@ use std::path::{Path, PathBuf};
 
 use crate::assess::AssessError;
 use crate::plan::{Plan, demo_plan};
-use crate::report::{Detail, ReportError, render, write_set};
+use crate::report::{Detail, RenderOptions, ReportError, check_target, render, survey_json, write_set};
 use crate::survey::{SurveyResult, survey};
 
 use super::arguments::{DetailChoice, FailOn, SurveyArguments};
@@ -27,7 +27,7 @@ pub fn run(arguments: &SurveyArguments) -> Result<(), Failure> {
         None => demo_plan(),
     };
     let out = arguments.out.clone().unwrap_or_else(|| PathBuf::from("reports").join(&plan.stem));
-    crate::report::check_target(&out).map_err(report_failure)?;
+    check_target(&out).map_err(report_failure)?;
     let channels: u64 = plan.groups.iter().map(|group| group.channels.len()).sum();
     let bar = Bar::new(channels, "channels", voice);
     let result = in_pool(arguments.common.jobs, || survey(&plan, &|items| bar.advance(items)))?
@@ -39,14 +39,15 @@ pub fn run(arguments: &SurveyArguments) -> Result<(), Failure> {
         None if channels > FULL_DETAIL_CHANNELS => Detail::Flagged,
         None => Detail::All,
     };
-    let set = render(&result, detail).map_err(report_failure)?;
+    let options = RenderOptions { detail };
+    let set = render(&result, &options).map_err(report_failure)?;
     write_set(&out, &set).map_err(report_failure)?;
     for warning in &result.warnings {
         voice.say(&format!("warning: {warning}"));
     }
     voice.say(&verdict_line(&result, &out));
     if arguments.common.json {
-        output::print(set.survey_json())?;
+        output::print(&survey_json(&result, &options).map_err(report_failure)?)?;
     }
     flagged(arguments.common.fail_on, result.summary.bad, result.summary.marginal)
 }
@@ -83,7 +84,8 @@ pub fn assess_failure(plan: &Plan, error: &AssessError) -> Failure {
     Failure::Content(format!("error: plan \"{}\": {error}", plan.identity.title))
 }
 
-fn report_failure(error: ReportError) -> Failure {
+/// Returns the failure of a writer.
+pub fn report_failure(error: ReportError) -> Failure {
     Failure::InputOutput(format!("error: {error}"))
 }
 

@@ -20,12 +20,21 @@ impl Plan {
 }
 
 impl ChannelList {
+    /// Returns the smallest and largest channel; `None` for an empty list or beyond 127 bits.
+    #[must_use]
+    pub fn range(&self) -> Option<(Frequency, Frequency)> {
+        match self {
+            Self::Raster { first, count, .. } => Some((*first, self.get(count.checked_sub(1)?)?)),
+            Self::List(list) => Some((*list.iter().min()?, *list.iter().max()?)),
+        }
+    }
+
     /// Returns `None` outside the list's range, else the index of the frequency where it is a member.
     fn place_of(&self, channel: Frequency) -> Option<Option<u64>> {
         match self {
-            Self::Raster { first, spacing, count } => {
-                let last = self.get(count.checked_sub(1)?)?;
-                if channel < *first || channel > last {
+            Self::Raster { first, spacing, .. } => {
+                let (low, high) = self.range()?;
+                if channel < low || channel > high {
                     return None;
                 }
                 let steps = channel.hz().minus(&first.hz()).ok()?.over(&spacing.hz()).ok();
@@ -35,8 +44,8 @@ impl ChannelList {
                 Some(index.or((channel == *first).then_some(0)))
             }
             Self::List(list) => {
-                let (low, high) = (list.iter().min()?, list.iter().max()?);
-                if channel < *low || channel > *high {
+                let (low, high) = self.range()?;
+                if channel < low || channel > high {
                     return None;
                 }
                 Some(list.iter().position(|member| *member == channel).and_then(|i| u64::try_from(i).ok()))

@@ -1,5 +1,6 @@
 //! The report set: pure bytes from one survey result, and the one place that writes them to a folder.
 
+mod channel;
 mod columns;
 mod document;
 mod error;
@@ -13,11 +14,12 @@ mod survey_json;
 mod svg_backend;
 mod write;
 
+pub use channel::{channel_json, channel_text};
 pub use columns::{COLUMNS, Cell, Column, channels_csv};
 pub use error::ReportError;
 pub use json::json_text;
 pub use survey_json::survey_json;
-pub use write::write_set;
+pub use write::{check_target, write_set};
 
 use serde::Serialize;
 

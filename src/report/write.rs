@@ -48,6 +48,22 @@ pub fn write_set(out_dir: &Path, set: &ReportSet) -> Result<(), ReportError> {
     carry_over(aside, &old, &target, &old_files)
 }
 
+/// Checks, before the long work, that a set can be written as `out_dir`: absent, empty, or an earlier set, in a folder
+/// that takes new files.
+///
+/// # Errors
+/// As [`write_set`].
+pub fn check_target(out_dir: &Path) -> Result<(), ReportError> {
+    let target = resolved(out_dir)?;
+    old_set(&target)?;
+    let parent = target.parent().unwrap_or(Path::new("/"));
+    let existing = parent.ancestors().find(|folder| folder.exists()).unwrap_or(parent);
+    if !existing.is_dir() {
+        return Err(ReportError::NotAFolder { path: existing.to_owned() });
+    }
+    sibling(existing, ".thornmap-new-").map(drop)
+}
+
 /// Returns the absolute path of the output folder, through links, so that the folder itself is swapped and no link.
 fn resolved(out_dir: &Path) -> Result<PathBuf, ReportError> {
     match fs::canonicalize(out_dir) {

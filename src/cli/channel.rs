@@ -1,0 +1,93 @@
+//! `channel`: one channel in full.
+
+use crate::assess::{ChannelResult, Setup, SpectrumView, spectrum_view};
+use crate::base::{Dimension, Frequency, parse_quantity};
+use crate::plan::Plan;
+use crate::report::{channel_json, channel_text};
+
+use super::arguments::ChannelArguments;
+use super::failure::Failure;
+use super::output::{self, Voice};
+use super::plan_file;
+use super::survey::{assess_failure, flagged, in_pool, report_failure};
+
+/// Runs `channel`.
+///
+/// # Errors
+/// `Failure` with the exit status that fits.
+pub fn run(arguments: &ChannelArguments) -> Result<(), Failure> {
+    let plan = plan_file::read(&arguments.plan)?;
+    let channel = frequency(&arguments.frequency)?;
+    let (result, view) = in_pool(arguments.common.jobs, || assess(&plan, channel, arguments.group.as_deref()))??;
+    if arguments.common.json {
+        output::print(&channel_json(&result, view.as_ref()).map_err(report_failure)?)?;
+    } else {
+        output::print(&channel_text(&plan, &result))?;
+    }
+    let voice = Voice::from_quiet(arguments.common.quiet);
+    for warning in &result.warnings {
+        voice.say(&format!("warning: {warning}"));
+    }
+    let (bad, marginal) = match result.verdict {
+        crate::assess::Verdict::Bad => (1, 0),
+        crate::assess::Verdict::Marginal => (0, 1),
+        crate::assess::Verdict::Clear => (0, 0),
+    };
+    flagged(arguments.common.fail_on, bad, marginal)
+}
+
+/// Reads a frequency argument.
+///
+/// # Errors
+/// `Content` naming what was typed and the units that are accepted.
+fn frequency(typed: &str) -> Result<Frequency, Failure> {
+    match parse_quantity(typed, Dimension::Frequency) {
+        Ok(hz) if hz.sign() > 0 => Ok(Frequency::from_hz(hz)),
+        Ok(_) => Err(Failure::Content(format!("error: FREQUENCY \"{typed}\" must be above zero"))),
+        Err(error) => Err(Failure::Content(format!("error: FREQUENCY: {error}"))),
+    }
+}
+
+fn assess(
+    plan: &Plan,
+    channel: Frequency,
+    group: Option<&str>,
+) -> Result<(ChannelResult, Option<SpectrumView>), Failure> {
+    let Some((group_index, place)) = plan.locate(channel, group) else {
+        return Err(Failure::Content(not_held(plan, channel, group)));
+    };
+    let setup = Setup::new(plan).map_err(|error| assess_failure(plan, &error))?;
+    let mut scratch = setup.scratch();
+    let index = place.unwrap_or_else(|| plan.groups[group_index].channels.len());
+    let mut result =
+        setup.assess(group_index, index, channel, &mut scratch).map_err(|error| assess_failure(plan, &error))?;
+    if place.is_none() {
+        result.warnings.push(format!("{channel} is not on the raster of group \"{}\"", result.group));
+    }
+    let view =
+        spectrum_view(&setup, group_index, channel, &mut scratch).map_err(|error| assess_failure(plan, &error))?;
+    Ok((result, view))
+}
+
+/// Returns why no group holds a channel, with the ranges there are.
+fn not_held(plan: &Plan, channel: Frequency, group: Option<&str>) -> String {
+    let ranges: Vec<String> = plan
+        .groups
+        .iter()
+        .filter_map(|candidate| {
+            let (low, high) = candidate.channels.range()?;
+            Some(format!("  \"{}\": {low} to {high}", candidate.name))
+        })
+        .collect();
+    let what = match group {
+        Some(name) if !plan.groups.iter().any(|candidate| candidate.name == name) => {
+            format!("the plan has no group \"{name}\"")
+        }
+        Some(name) => format!("group \"{name}\" does not hold channel {channel}"),
+        None => format!("no group holds channel {channel}"),
+    };
+    format!(
+        "error: {what}; the groups and their ranges (channel frequencies, before injection):\n{}",
+        ranges.join("\n")
+    )
+}
