@@ -17,7 +17,7 @@ use super::setup::{Setup, gain_at};
 pub struct ChannelNoise {
     /// Noise alone; `None` when a source is unknown.
     pub total: Option<PhaseFigures>,
-    /// Noise with the listed tones; `None` when a source or a tone inside the limits is unknown.
+    /// Noise with the listed tones; `None` when a source, or a tone inside guard or loop edge, is unknown.
     pub total_with_tones: Option<PhaseFigures>,
     /// Known sources with the known parts of the tones.
     pub known_with_tones: PhaseFigures,
@@ -94,11 +94,12 @@ pub fn channel_noise(
         if let Some(level) = tone.known_level_dbc {
             known_with_tones = known_with_tones.with_tone(tone.offset_hz, power_from_db(level));
         }
-        tones_known &= tone.level_dbc.is_some();
+        // Unknown tones beyond guard and loop edge are counted elsewhere; they change nothing.
+        tones_known &= tone.level_dbc.is_some() || !(tone.inside_guard || tone.inside_loop);
     }
     let complete = unknown.is_empty();
     if !tones_known {
-        unknown.push("level of a tone inside the integration limits".to_owned());
+        unknown.push("level of a tone inside guard or loop edge".to_owned());
     }
     ChannelNoise {
         total: complete.then_some(known),

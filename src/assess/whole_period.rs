@@ -17,7 +17,7 @@ use super::setup::{AssessError, Setup};
 const BLOCK: usize = 1 << 14;
 
 impl Setup<'_> {
-    /// Returns the difference between the first in-loop line of the shared curve and the same line summed over the
+    /// Returns the difference between the line of the shared curve nearest the carrier and the same line summed over the
     /// whole exact period \[dB\]; `None` where there is no such line above its own noise.
     ///
     /// # Errors
@@ -30,7 +30,9 @@ impl Setup<'_> {
         let mut scratch = self.scratch();
         let Some((family, lines)) = legal.lines(channel.pfd_hz, &mut scratch)? else { return Ok(None) };
         let (Some(curve), Some(offset_cycles)) = (legal.charge_curve(), lines.rest_cycles) else { return Ok(None) };
-        let Some((tone, line)) = family.iter().zip(&lines.family).next() else { return Ok(None) };
+        // The tone nearest the carrier: there the sequence's own shaped noise is weakest.
+        let nearest = family.iter().zip(&lines.family).min_by_key(|(tone, _)| tone.residue.unsigned_abs());
+        let Some((tone, line)) = nearest else { return Ok(None) };
         if line.uncertainty_db.is_none() {
             return Ok(None);
         }

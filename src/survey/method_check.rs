@@ -1,6 +1,7 @@
 //! The run's own check: lines from the shared curve against direct correlation over the whole exact period.
 
 use num_traits::ToPrimitive;
+use rayon::prelude::*;
 
 use crate::assess::{AssessError, ChannelResult, Method, Setup};
 
@@ -25,14 +26,10 @@ pub fn check_method(setup: &Setup, channels: &[ChannelResult]) -> Result<MethodC
         })
         .collect();
     let count = eligible.len().min(CHECKED_CHANNELS);
-    let mut check = MethodCheck::default();
-    for i in 0..count {
-        let channel = eligible[i * eligible.len() / count];
-        if let Some(difference_db) = setup.whole_period_difference_db(channel)? {
-            check.channels += 1;
-            let worst = check.worst_difference_db.unwrap_or(0.0).max(difference_db);
-            check.worst_difference_db = Some(worst);
-        }
-    }
-    Ok(check)
+    let differences = (0..count)
+        .into_par_iter()
+        .map(|i| setup.whole_period_difference_db(eligible[i * eligible.len() / count]))
+        .collect::<Result<Vec<_>, AssessError>>()?;
+    let known: Vec<f64> = differences.into_iter().flatten().collect();
+    Ok(MethodCheck { channels: known.len() as u64, worst_difference_db: known.into_iter().reduce(f64::max) })
 }
