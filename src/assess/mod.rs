@@ -19,3 +19,4 @@ pub use result::{BoundaryNear, ChannelResult, Contributions, Illegal, Method, Or
 pub use setup::{AssessError, LoopSource, Setup, gain_at};
 pub use verdict::{Evidence, MaskState, judge};
 pub use view::{SpectrumView, spectrum_view};
+pub use whole_period::LineCheck;

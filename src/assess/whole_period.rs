@@ -16,13 +16,22 @@ use super::setup::{AssessError, Setup};
 /// Outputs generated at a time.
 const BLOCK: usize = 1 << 14;
 
+/// One line found by both routes.
+#[derive(Debug, Clone, Copy, PartialEq)]
+pub struct LineCheck {
+    /// Size of the difference \[dB\].
+    pub difference_db: f64,
+    /// What the channel states for the line \[dB\].
+    pub uncertainty_db: f64,
+}
+
 impl Setup<'_> {
-    /// Returns the difference between the line of the shared curve nearest the carrier and the same line summed over the
-    /// whole exact period \[dB\]; `None` where there is no such line above its own noise.
+    /// Returns how the channel's surest line of the shared curve compares with the same line summed over the whole exact
+    /// period; `None` where no line stands above its own noise.
     ///
     /// # Errors
     /// As for the channel itself.
-    pub fn whole_period_difference_db(&self, channel: &ChannelResult) -> Result<Option<f64>, AssessError> {
+    pub fn check_line(&self, channel: &ChannelResult) -> Result<Option<LineCheck>, AssessError> {
         let Some(period) = channel.period.as_ref().and_then(ToPrimitive::to_u64) else { return Ok(None) };
         let group = &self.plan().groups[channel.group_index];
         let placement = place(self.plan(), group, channel.channel)?;
@@ -30,12 +39,12 @@ impl Setup<'_> {
         let mut scratch = self.scratch();
         let Some((family, lines)) = legal.lines(channel.pfd_hz, &mut scratch)? else { return Ok(None) };
         let (Some(curve), Some(offset_cycles)) = (legal.charge_curve(), lines.rest_cycles) else { return Ok(None) };
-        // The tone nearest the carrier: there the sequence's own shaped noise is weakest.
-        let nearest = family.iter().zip(&lines.family).min_by_key(|(tone, _)| tone.residue.unsigned_abs());
-        let Some((tone, line)) = nearest else { return Ok(None) };
-        if line.uncertainty_db.is_none() {
-            return Ok(None);
-        }
+        let surest = family
+            .iter()
+            .zip(&lines.family)
+            .filter_map(|(tone, line)| line.uncertainty_db.map(|uncertainty_db| (tone, line, uncertainty_db)))
+            .min_by(|a, b| a.2.total_cmp(&b.2));
+        let Some((tone, line, uncertainty_db)) = surest else { return Ok(None) };
         let expected = (line.modulator + line.nonlinearity.unwrap_or_default()).norm();
         let found =
             correlate_period(&placement, period, tone.residue.unsigned_abs(), |phase| curve.at(phase + offset_cycles))
@@ -44,7 +53,7 @@ impl Setup<'_> {
             return Ok(None);
         }
         let ratio = found.norm() / expected;
-        Ok(Some(db_from_power(ratio * ratio).abs()))
+        Ok(Some(LineCheck { difference_db: db_from_power(ratio * ratio).abs(), uncertainty_db }))
     }
 }
 

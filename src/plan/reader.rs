@@ -153,7 +153,10 @@ impl<'t> Reader<'t> {
         let mut basis = Basis::Assumed;
         let mut note = None;
         let mut plain = value;
-        if let Some(table) = value.get_ref().as_table() {
+        // A form of its own may be a table without being a figure: { largest = … }, a dither.
+        let is_special = matches!(key_of(section.kind, name).kind, Kind::Special(_));
+        let is_figure = |table: &DeTable| !is_special || table.contains_key("value");
+        if let Some(table) = value.get_ref().as_table().filter(|table| is_figure(table)) {
             const KNOWN: [&str; 3] = ["value", "basis", "note"];
             for key in table.keys() {
                 let typed = key.get_ref().as_ref();

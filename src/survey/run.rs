@@ -39,12 +39,14 @@ pub fn survey(plan: &Plan, done: &(dyn Fn(u64) + Sync)) -> Result<SurveyResult, 
     let mut warnings = plan.warnings.clone();
     warnings.extend(setup.warnings().iter().cloned());
     warnings.extend(shared_warnings(&channels));
+    let (method_check, doubts) = check_method(&setup, &channels)?;
+    warnings.extend(doubts);
     Ok(SurveyResult {
         assumptions: setup.assumptions(),
         conventions: conventions(),
         loop_summary: loop_summary(&setup, &channels),
         summary: summarise(&channels),
-        method_check: check_method(&setup, &channels)?,
+        method_check,
         spectrum: spectrum_of(&setup, &channels)?,
         plan: plan.clone(),
         channels,
