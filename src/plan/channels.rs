@@ -76,7 +76,7 @@ fn channel_list(reader: &mut Reader, section: &Section, load: Load) -> Option<Ch
 
 fn listed(reader: &mut Reader, section: &Section, name: &str, list: Located<Vec<Frequency>>) -> Option<ChannelList> {
     if list.value.is_empty() {
-        reader.problem(&section.key(name), &list.span, "holds no channel");
+        reader.problem(&section.key(name), &list.span, "found no channel, at least one is due");
         return None;
     }
     let mut sorted = list.value.clone();

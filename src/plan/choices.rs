@@ -1,6 +1,7 @@
 //! Title block, alternatives and analysis.
 
 use crate::base::Frequency;
+use crate::modulator::{Dither, ModulatorError, ModulatorSettings};
 
 use super::checked::{Alternatives, Analysis, Identity, ModulatorPlan, Reference};
 use super::modulation::dither_value;
@@ -43,14 +44,9 @@ pub fn alternatives(reader: &mut Reader, section: &Section, own: Option<(&Refere
     let references = frequencies(reader.quantities(section, "references"));
     let dividers = reader.wholes(section, "dividers").map(|found| found.value);
     let doubler = flags(reader, section);
-    let orders = reader
-        .wholes(section, "orders")
-        .map(|found| found.value.into_iter().filter_map(|order| u8::try_from(order).ok()).collect::<Vec<_>>());
-    let dithers = reader.plain(section, "dithers").and_then(|value| {
-        let path = section.key("dithers");
-        let items = reader.items(&path, value)?;
-        items.into_iter().map(|item| dither_value(reader, &path, item)).collect::<Option<Vec<_>>>()
-    });
+    let settings = own.map(|(_, modulator)| &modulator.settings);
+    let orders = orders(reader, section, settings);
+    let dithers = dithers(reader, section, settings, orders.as_deref());
     let injections = frequencies(reader.quantities(section, "injections")).unwrap_or_default();
     let nudge = reader.frequency(section, "nudge").map_or(Frequency::from_whole_hz(0), |found| found.value);
     let reference = own.map(|(reference, _)| reference);
@@ -64,6 +60,48 @@ pub fn alternatives(reader: &mut Reader, section: &Section, own: Option<(&Refere
         injections,
         nudge,
     }
+}
+
+/// Orders that the plan's structure has.
+fn orders(reader: &mut Reader, section: &Section, own: Option<&ModulatorSettings>) -> Option<Vec<u8>> {
+    let found = reader.wholes(section, "orders")?;
+    let orders: Vec<u8> = found.value.into_iter().filter_map(|order| u8::try_from(order).ok()).collect();
+    for order in &orders {
+        let trial = own.map(|own| ModulatorSettings { order: *order, dither: Dither::None, ..plain(own) });
+        if let Some(Err(error)) = trial.map(|trial| trial.check()) {
+            reader.problem(&section.key("orders"), &found.span, error.to_string());
+        }
+    }
+    Some(orders)
+}
+
+/// Dithers that fit the plan's structure at the highest order a remedy may use.
+fn dithers(
+    reader: &mut Reader,
+    section: &Section,
+    own: Option<&ModulatorSettings>,
+    orders: Option<&[u8]>,
+) -> Option<Vec<Dither>> {
+    let value = reader.plain(section, "dithers")?;
+    let path = section.key("dithers");
+    let mut dithers = Vec::new();
+    for item in reader.items(&path, value)? {
+        let dither = dither_value(reader, &path, item)?;
+        let order = own.map(|own| orders.and_then(|orders| orders.iter().max().copied()).unwrap_or(0).max(own.order));
+        let trial = own.zip(order).map(|(own, order)| ModulatorSettings { order, dither, ..plain(own) });
+        if let Some(Err(error)) = trial.map(|trial| trial.check())
+            && !matches!(error, ModulatorError::OrderOutOfRange { .. })
+        {
+            reader.problem(&path, &item.span(), error.to_string());
+        }
+        dithers.push(dither);
+    }
+    Some(dithers)
+}
+
+/// Returns the plan's structure without what depends on its order.
+fn plain(own: &ModulatorSettings) -> ModulatorSettings {
+    ModulatorSettings { seeds: Vec::new(), noise_transfer: None, ..own.clone() }
 }
 
 fn flags(reader: &mut Reader, section: &Section) -> Option<Vec<bool>> {

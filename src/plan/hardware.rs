@@ -187,6 +187,12 @@ pub fn loop_filter(reader: &mut Reader, section: &Section, load: Load) -> Option
     ];
     let given: Vec<&str> = ways.iter().filter(|(_, given)| *given).map(|(name, _)| *name).collect();
     let plan = match given.as_slice() {
+        ["components" | "table"] if section.value("design_divider").is_some() => {
+            let span = section.value("design_divider").map_or_else(|| section.head(), toml::Spanned::span);
+            let text = "belongs to bandwidth and phase_margin; this filter is given, not designed";
+            reader.problem(&section.key("design_divider"), &span, text);
+            return None;
+        }
         ["bandwidth"] => LoopPlan::Designed(design(reader, section)?),
         ["components"] => LoopPlan::Components(components(reader, section)?),
         ["table"] => LoopPlan::Measured(response_table(reader, section, load)?),
@@ -218,7 +224,7 @@ fn design(reader: &mut Reader, section: &Section) -> Option<FilterDesign> {
             reader.problem(&section.key(name), &section.head(), format!("missing; {other} needs it"));
         }
     }
-    let divider = section.value("design_divider").and_then(|_| reader.number(section, "design_divider"));
+    let divider = reader.number(section, "design_divider");
     if let Some(found) = divider.as_ref().filter(|found| found.value <= 0.0) {
         reader.problem(&section.key("design_divider"), &found.span, "must be above zero");
     }

@@ -4,7 +4,7 @@ use toml::Spanned;
 use toml::de::DeValue;
 
 use crate::base::{Dimension, Frequency};
-use crate::modulator::{Dither, ModulatorConfig, ModulatorSettings, Modulus, ModulusRule, Structure};
+use crate::modulator::{Dither, ModulatorConfig, ModulatorError, ModulatorSettings, Modulus, ModulusRule, Structure};
 
 use super::checked::ModulatorPlan;
 use super::keys::Sign;
@@ -44,37 +44,70 @@ pub fn modulator(reader: &mut Reader, section: &Section) -> Option<ModulatorPlan
         noise_transfer: noise_transfer.as_ref().map(|found| found.value.clone()),
         runs_at_zero,
     };
+    // An order that could not be read is noted already; by the default one the rest would be misjudged.
+    if order.is_none() && section.value("order").is_some() {
+        return None;
+    }
+    let is_sound = check_settings(reader, section, &settings);
     let modulus = modulus?;
-    if let Err(error) = settings.check() {
-        // The engine names the field in its message; point at the section's most likely line.
-        let span =
-            [order.map(|f| f.span), seeds.map(|f| f.span), dither.map(|f| f.span), noise_transfer.map(|f| f.span)]
-                .into_iter()
-                .flatten()
-                .next()
-                .unwrap_or_else(|| section.head());
-        reader.problem(&section.path, &span, error.to_string());
+    if !is_sound {
         return None;
     }
     if let Err(error) = check_modulus(&settings, &modulus.value) {
-        let span = seeds_or(section, &modulus);
-        reader.problem(&section.path, &span, error);
+        report(reader, section, &error);
         return None;
     }
     Some(ModulatorPlan { settings, modulus: modulus.value })
 }
 
-/// Returns the place of the seeds, or of the modulus.
-fn seeds_or(section: &Section, modulus: &Located<ModulusRule>) -> std::ops::Range<usize> {
-    section.value("seeds").map_or_else(|| modulus.span.clone(), Spanned::span)
+/// Notes every complaint of the engine: it gives one at a time, so what it names is set aside and the rest asked again.
+fn check_settings(reader: &mut Reader, section: &Section, settings: &ModulatorSettings) -> bool {
+    let mut rest = settings.clone();
+    let mut is_sound = true;
+    // One turn for each field that can be set aside.
+    for _ in 0..4 {
+        let Err(error) = rest.check() else { break };
+        report(reader, section, &error);
+        is_sound = false;
+        match key_named_by(&error) {
+            // Without an order the others cannot be judged.
+            "order" => break,
+            "seeds" => rest.seeds.clear(),
+            "dither" => rest.dither = Dither::None,
+            _ => rest.noise_transfer = None,
+        }
+    }
+    is_sound
+}
+
+/// Notes a complaint of the engine at the key that it is about.
+fn report(reader: &mut Reader, section: &Section, error: &ModulatorError) {
+    let name = key_named_by(error);
+    let span = section.value(name).map_or_else(|| section.head(), Spanned::span);
+    reader.problem(&section.key(name), &span, error.to_string());
+}
+
+/// Returns the key that a complaint of the engine is about.
+fn key_named_by(error: &ModulatorError) -> &'static str {
+    match error {
+        ModulatorError::OrderOutOfRange { .. } => "order",
+        ModulatorError::TooManySeeds { .. } | ModulatorError::SeedOutOfRange { .. } => "seeds",
+        ModulatorError::NoDitherInput { .. }
+        | ModulatorError::DitherStageOutOfRange { .. }
+        | ModulatorError::UnknownRegister { .. }
+        | ModulatorError::RegisterSeedOutOfRange { .. }
+        | ModulatorError::DitherWeightOutOfRange { .. } => "dither",
+        ModulatorError::NoErrorFilter { .. }
+        | ModulatorError::CoefficientCount { .. }
+        | ModulatorError::CoefficientOutOfRange { .. } => "ntf",
+        _ => "modulus",
+    }
 }
 
 /// Checks that the structure works with the modulus, and that the seeds fit a fixed one.
-fn check_modulus(settings: &ModulatorSettings, rule: &ModulusRule) -> Result<(), String> {
-    match rule.working(settings.structure).map_err(|error| error.to_string())? {
-        ModulusRule::Fixed(modulus) => {
-            ModulatorConfig::new(settings, modulus, 0, true).map(|_| ()).map_err(|error| error.to_string())
-        }
+fn check_modulus(settings: &ModulatorSettings, rule: &ModulusRule) -> Result<(), ModulatorError> {
+    match rule.working(settings.structure)? {
+        ModulusRule::Fixed(modulus) => ModulatorConfig::new(settings, modulus, 0, true).map(|_| ()),
         ModulusRule::Largest(_) | ModulusRule::Step(_) => Ok(()),
     }
 }

@@ -7,7 +7,7 @@ use toml::Spanned;
 use toml::de::{DeTable, DeValue};
 
 use super::channels::{MOST_CHANNELS, group};
-use super::checked::{Limits, Plan};
+use super::checked::{Limits, MismatchPoints, Plan};
 use super::choices::{alternatives, analysis, identity};
 use super::hardware::{detector, divider, loop_filter, oscillator, reference};
 use super::keys::{LISTS, SECTIONS};
@@ -61,6 +61,7 @@ fn read(reader: &mut Reader, root: &DeTable, text: &str, stem: &str, load: Load)
     let found = section(reader, "reference");
     let reference = reference(reader, &found);
     let found = section(reader, "oscillator");
+    let has_tuning = found.value("tuning").is_some();
     let oscillator = oscillator(reader, &found);
     let found = section(reader, "divider");
     let divider = divider(reader, &found);
@@ -68,6 +69,11 @@ fn read(reader: &mut Reader, root: &DeTable, text: &str, stem: &str, load: Load)
     let modulator = modulator(reader, &found);
     let found = section(reader, "detector");
     let detector = detector(reader, &found, load);
+    let over_voltage = detector.as_ref().is_some_and(|d| matches!(d.mismatch, Some(MismatchPoints::Table(_))));
+    if let Some(mismatch) = found.value("mismatch").filter(|_| over_voltage && !has_tuning) {
+        let text = "a mismatch over tuning voltage needs oscillator.tuning";
+        reader.problem("detector.mismatch", &mismatch.span(), text);
+    }
     let found = section(reader, "loop");
     let loop_filter = loop_filter(reader, &found, load);
     let found = section(reader, "boundary");

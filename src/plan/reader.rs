@@ -153,10 +153,11 @@ impl<'t> Reader<'t> {
         let mut basis = Basis::Assumed;
         let mut note = None;
         let mut plain = value;
-        // A form of its own may be a table without being a figure: { largest = … }, a dither.
-        let is_special = matches!(key_of(section.kind, name).kind, Kind::Special(_));
-        let is_figure = |table: &DeTable| !is_special || table.contains_key("value");
-        if let Some(table) = value.get_ref().as_table().filter(|table| is_figure(table)) {
+        // A key with braces of its own, such as { step = … }, is a figure only where it says value.
+        let own_braces = matches!(key_of(section.kind, name).kind, Kind::Special(_));
+        if let Some(table) = value.get_ref().as_table()
+            && (!own_braces || table.get("value").is_some())
+        {
             const KNOWN: [&str; 3] = ["value", "basis", "note"];
             for key in table.keys() {
                 let typed = key.get_ref().as_ref();
@@ -179,7 +180,13 @@ impl<'t> Reader<'t> {
                     }
                 }
             }
-            note = table.get("note").and_then(|found| found.get_ref().as_str()).map(str::to_owned);
+            if let Some(found) = table.get("note") {
+                note = found.get_ref().as_str().map(str::to_owned);
+                if note.is_none() {
+                    let text = format!("found {}, expected a text in quotes", describe(found.get_ref()));
+                    self.problem(&format!("{path}.note"), &found.span(), text);
+                }
+            }
             match table.get("value") {
                 Some(found) => plain = found,
                 None => {
