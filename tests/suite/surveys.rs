@@ -41,7 +41,7 @@ spacing = "12.5 kHz"
 
 /// Every count was found by an independent script in exact arithmetic: 400–470 MHz inclusive, 12.5 kHz, q = 1,
 /// 0 < tone offset ≤ guard.
-const NEAR_INTEGER: [(&str, u64, i128, usize); 8] = [
+pub(super) const NEAR_INTEGER: [(&str, u64, i128, usize); 8] = [
     ("19.2 MHz", 4, 200_000, 112),
     ("20 MHz", 4, 200_000, 112),
     ("19.2 MHz", 4, 199_999, 84),
