@@ -129,6 +129,24 @@ impl Dimension {
         }
     }
 
+    /// Returns the accepted units as a regular expression in the common core of ECMA 262 and PCRE, for the schema.
+    ///
+    /// # Examples
+    /// ```
+    /// use thornmap::base::Dimension;
+    /// assert_eq!(Dimension::Ratio.unit_pattern(), "(%|ppm|ppb)");
+    /// ```
+    #[must_use]
+    pub fn unit_pattern(self) -> String {
+        let prefixes = PREFIXES.map(|(symbol, _)| symbol).join("|");
+        let escaped = |symbol: &str| symbol.replace('(', "\\(").replace(')', "\\)");
+        let units = self.units().iter().map(|unit| match unit.prefixed {
+            true => format!("({prefixes})?{}", escaped(unit.symbol)),
+            false => unit.symbol.to_owned(),
+        });
+        format!("({})", units.collect::<Vec<_>>().join("|"))
+    }
+
     /// Returns the decimal exponent of a unit as typed, or `None` where it is no unit of this dimension.
     fn exponent_of(self, typed: &str) -> Option<i32> {
         for unit in self.units() {

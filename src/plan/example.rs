@@ -33,8 +33,8 @@ const VALUES: &[(&str, &str, &str)] = &[
     ("loop", "phase_margin", "\"50 deg\""),
     ("boundary", "guard", "\"100 kHz\""),
     ("anchor", "mechanism", "\"detector\""),
-    ("anchor", "level", "{ value = \"-52 dBc\", basis = \"assumed\", note = \"replace by a measurement\" }"),
-    ("anchor", "at", "\"422.5 MHz\""),
+    ("anchor", "level", "{ value = \"-58 dBc\", basis = \"assumed\", note = \"replace by a measurement\" }"),
+    ("anchor", "at", "\"422.4125 MHz\""),
     ("limits", "spur", "[[\"1 kHz\", \"-45 dBc\"], [\"10 kHz\", \"-60 dBc\"], [\"1 MHz\", \"-75 dBc\"]]"),
     ("limits", "margin", "\"6 dB\""),
     ("limits", "phase_error", "\"1.5 deg\""),
@@ -44,17 +44,58 @@ const VALUES: &[(&str, &str, &str)] = &[
     ("channels", "spacing", "\"12.5 kHz\""),
 ];
 
-/// What is written for a key without a value of its own, as a comment.
+/// Values of the keys that stand as comments: a starting point, or the default written out.
 const HINTS: &[(&str, &str, &str)] = &[
+    ("reference", "doubler", "false"),
+    ("reference", "divider", "1"),
     ("reference", "tolerance", "\"2 ppm\""),
     ("oscillator", "tuning", "[[\"0.5 V\", \"1.65 GHz\"], [\"2.5 V\", \"1.85 GHz\"]]"),
     ("oscillator", "tuning_range", "[\"0.4 V\", \"2.9 V\"]"),
-    ("oscillator", "leeson", "{ noise_factor = 4, power = \"1 mW\", loaded_q = 20, corner = \"10 kHz\" }"),
-    ("loop", "components", "{ c1 = \"2.2 nF\", r2 = \"510 ohm\", c2 = \"15 nF\" }"),
+    (
+        "oscillator",
+        "leeson",
+        "{ noise_factor = 4, power = \"1 mW\", loaded_q = 20, corner = \"10 kHz\", temperature = \"290 K\" }",
+    ),
+    ("divider", "floor", "\"-160 dBc/Hz\""),
+    ("modulator", "ntf", "[3, -3, 1]"),
+    ("modulator", "runs_at_zero", "false"),
+    ("detector", "offset_current", "\"0 uA\""),
+    ("detector", "dead_zone", "\"0 ps\""),
+    ("detector", "quadratic", "0"),
+    ("detector", "cubic", "0"),
+    ("detector", "table", "\"charge.csv\""),
+    ("detector", "reset_delay", "\"500 ps\""),
+    ("detector", "offset_noise", "\"3 pA/sqrt(Hz)\""),
+    ("detector", "pump_noise", "\"20 pA/sqrt(Hz)\""),
+    ("loop", "design_divider", "88.5"),
+    ("loop", "components", "{ c1 = \"2.2 nF\", r2 = \"510 ohm\", c2 = \"15 nF\", r3 = \"220 ohm\", c3 = \"470 pF\" }"),
+    ("loop", "table", "\"h.csv\""),
+    ("loop", "edge", "\"unity-gain\""),
+    ("boundary", "largest_q", "3"),
+    ("boundary", "harmonics", "5"),
+    ("anchor", "offset", "\"7.5 kHz\""),
+    ("anchor", "output_divider", "4"),
+    ("anchor", "q", "1"),
+    ("anchor", "roll_off", "\"0 dB\""),
     ("clock", "name", "\"processor\""),
     ("clock", "frequency", "\"48 MHz\""),
-    ("channels", "list", "[\"422.1 MHz\", \"25/3 kHz\"]"),
+    ("clock", "anchor", "{ mechanism = \"output\", level = \"-70 dBc\", at = \"422.5 MHz\" }"),
+    ("limits", "integration", "[\"1 kHz\", \"10 MHz\"]"),
+    ("channels", "list", "[\"422.1 MHz\", \"1267/3 MHz\"]"),
+    ("channels", "file", "\"channels.csv\""),
     ("channels", "injection", "\"-10.7 MHz\""),
+    ("channels", "output", "[4]"),
+    ("channels", "limits", "{ phase_error = \"1 deg\" }"),
+    ("alternatives", "references", "[\"19.2 MHz\", \"20 MHz\"]"),
+    ("alternatives", "dividers", "[1, 2]"),
+    ("alternatives", "doubler", "[false, true]"),
+    ("alternatives", "orders", "[2, 3, 4]"),
+    ("alternatives", "dithers", "[\"none\", { stage = 1, register = 23, seed = 1, weight = 1 }]"),
+    ("alternatives", "injections", "[\"-10.7 MHz\", \"10.7 MHz\"]"),
+    ("alternatives", "nudge", "\"100 Hz\""),
+    ("analysis", "record", "131072"),
+    ("analysis", "span", "\"9.6 MHz\""),
+    ("analysis", "tone_floor", "\"-120 dBc\""),
 ];
 
 /// Returns a plan to start from: every key with its meaning, those that most plans need filled in.
@@ -102,7 +143,7 @@ fn write_section(text: &mut String, name: &str, head: &str) {
         match find(VALUES, key) {
             Some(value) => text.push_str(&format!("{} = {value}  # {}{default}\n", key.name, key.doc)),
             None => {
-                let value = find(HINTS, key).unwrap_or("…");
+                let value = find(HINTS, key).unwrap_or("\"…\"");
                 text.push_str(&format!("# {} = {value}  # {}{default}\n", key.name, key.doc));
             }
         }

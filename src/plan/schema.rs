@@ -3,11 +3,12 @@
 use serde_json::{Map, Value, json};
 
 use crate::base::Dimension;
+use crate::modulator::{Modulus, REGISTER_LENGTHS};
 
 use super::keys::{Key, Kind, LISTS, SECTIONS, keys_of};
 
-/// Returns the schema (draft 2020-12). Units and signs are left to `thornmap check`: the schema gives forms, words,
-/// bounds and descriptions.
+/// Returns the schema (draft 2020-12). Signs and what keys ask of each other are left to `thornmap check`: the schema
+/// gives forms, words, units, bounds and descriptions.
 ///
 /// # Examples
 /// ```
@@ -66,8 +67,8 @@ fn form(key: &Key) -> Value {
     match key.kind {
         Kind::Table(section_name) => section(section_name),
         Kind::Text => json!({ "anyOf": [{ "type": "string" }, figure(&json!({ "type": "string" }))] }),
-        kind => {
-            let plain = plain(kind);
+        _ => {
+            let plain = plain(key);
             json!({ "anyOf": [plain, figure(&plain)] })
         }
     }
@@ -82,8 +83,8 @@ fn figure(value: &Value) -> Value {
     })
 }
 
-fn plain(kind: Kind) -> Value {
-    match kind {
+fn plain(key: &Key) -> Value {
+    match key.kind {
         Kind::Text | Kind::Table(_) => json!({ "type": "string" }),
         Kind::Flag => json!({ "type": "boolean" }),
         Kind::Whole(least, most) => json!({ "type": "integer", "minimum": least, "maximum": most }),
@@ -101,13 +102,68 @@ fn plain(kind: Kind) -> Value {
         Kind::QuantityOrPairs(over, dimension) => {
             json!({ "anyOf": [quantity(dimension), pairs(over, dimension)] })
         }
-        // Their forms are checked by the program; the schema leaves them open.
-        Kind::Special(words) => json!({ "$comment": words }),
+        Kind::Special(_) => special(key),
     }
 }
 
+/// Returns the form of a key that has one of its own.
+///
+/// # Panics
+/// For such a key without a form here: a broken program.
+fn special(key: &Key) -> Value {
+    match (key.section, key.name) {
+        ("modulator", "modulus") => json!({ "anyOf": [
+            { "type": "integer", "minimum": 2, "maximum": Modulus::LARGEST },
+            { "type": "string", "pattern": r"^\s*2\^\s*([1-9]|[1-3][0-9]|4[0-8])\s*$" },
+            only("largest", &json!({ "type": "integer", "minimum": 2, "maximum": Modulus::LARGEST })),
+            only("step", &quantity(Dimension::Frequency)),
+        ] }),
+        ("modulator", "dither") => dither(),
+        ("modulator", "ntf") => json!({ "type": "array", "minItems": 1, "items": { "type": "integer" } }),
+        ("boundary", "guard") => {
+            json!({ "anyOf": [quantity(Dimension::Frequency), { "type": "string", "pattern": with_unit("%") }] })
+        }
+        ("alternatives", "doubler") => json!({ "type": "array", "minItems": 1, "items": { "type": "boolean" } }),
+        ("alternatives", "dithers") => json!({ "type": "array", "minItems": 1, "items": dither() }),
+        (section, name) => panic!("{section}.{name} has no form in the schema"),
+    }
+}
+
+fn dither() -> Value {
+    let whole = |least: u64| json!({ "type": "integer", "minimum": least });
+    json!({ "anyOf": [
+        { "const": "none" },
+        {
+            "type": "object",
+            "additionalProperties": false,
+            "required": ["stage", "register"],
+            "properties": {
+                "stage": whole(1),
+                "register": { "enum": REGISTER_LENGTHS },
+                "seed": whole(1),
+                "weight": whole(1),
+            },
+        },
+    ] })
+}
+
+/// Returns a table with this one key.
+fn only(name: &str, value: &Value) -> Value {
+    json!({ "type": "object", "additionalProperties": false, "required": [name], "properties": { name: value } })
+}
+
+/// Returns the pattern of a number, or a fraction of two, before a unit pattern.
+fn with_unit(unit: &str) -> String {
+    let digits = r"[+-]?([0-9][0-9_]*\.?[0-9_]*|\.[0-9][0-9_]*)([eE][+-]?[0-9]+)?";
+    format!(r"^\s*{digits}(\s*/\s*{digits})?\s*{unit}\s*$")
+}
+
 fn quantity(dimension: Dimension) -> Value {
-    json!({ "type": "string", "description": format!("accepted units: {}", dimension.accepted()) })
+    json!({
+        "type": "string",
+        "pattern": with_unit(&dimension.unit_pattern()),
+        "description": format!("accepted units: {}", dimension.accepted()),
+    })
 }
 
 fn pairs(first: Dimension, second: Dimension) -> Value {

@@ -12,7 +12,7 @@ use thornmap::plan::{
 use super::{PLAIN, changed, read, valid};
 
 fn hz(numerator: i128, denominator: i128) -> Frequency {
-    Frequency::from_hz(Exact::new(numerator, denominator).unwrap())
+    Frequency::from_hz(Exact::new(numerator, denominator).expect("the cases have a denominator"))
 }
 
 #[test]
@@ -83,7 +83,7 @@ fn every_form_of_detector_oscillator_and_loop_is_read() {
     let want = 10f64.powf(-0.15);
     assert!(
         (response.points[1].1.norm() - want).abs() < 1e-15
-            && (response.points[1].1.arg() + 0.785_398_163_397_448).abs() < 1e-15
+            && (response.points[1].1.arg() + std::f64::consts::FRAC_PI_4).abs() < 1e-15
     );
 }
 
