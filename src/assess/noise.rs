@@ -28,7 +28,7 @@ pub struct ChannelNoise {
 /// Returns the noise budget of a channel on a grid of offsets \[Hz\].
 ///
 /// The modulator's noise is the formula of an ideal sequence plus what the detector folds; an exact period has lines
-/// instead, which [`channel_noise`] adds.
+/// instead, which the channel stage adds.
 #[must_use]
 pub fn channel_budget(
     setup: &Setup,

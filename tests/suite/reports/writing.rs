@@ -143,8 +143,7 @@ fn a_link_to_a_folder_stays_a_link() {
 
 /// Writes invented sets to look at, below the build folder.
 #[test]
-#[ignore = "for eyes: run with --ignored after a change of looks"]
-fn writes_sets_to_look_at() {
+fn sets_of_every_size_are_written_and_can_be_looked_at() {
     for (name, count) in [("one", 2), ("usual", 137), ("far", 138), ("wide", 5601)] {
         let mut result = fixture::survey(count);
         if name == "far" {
@@ -154,7 +153,7 @@ fn writes_sets_to_look_at() {
         let out = Path::new(env!("CARGO_TARGET_TMPDIR")).join("look").join(name);
         write_set(&out, &set).unwrap();
         for file in &set.files {
-            println!("{name}/{} {}", file.path, file.bytes.len());
+            assert_eq!(std::fs::metadata(out.join(&file.path)).unwrap().len(), file.bytes.len() as u64);
         }
     }
 }
