@@ -52,6 +52,8 @@ enum Form {
 struct Terms {
     double: f64,
     single: f64,
+    /// Step of the phase at a pulse, only of a series R–C alone.
+    step: f64,
     poles: Vec<(f64, f64)>,
 }
 
@@ -62,6 +64,7 @@ impl Terms {
         Self {
             double: gain * network.integrator(),
             single: gain * (step + network.direct_ohm()),
+            step: gain * network.direct_ohm(),
             poles: network.poles().iter().map(|pole| (pole.rate, -gain * pole.residue / pole.rate)).collect(),
         }
     }
@@ -72,12 +75,15 @@ impl Terms {
     }
 
     /// Σ_k A(s + j2πk·f_pfd): Σ 1/(s + jkω) = (T/2)·coth(sT/2) and its derivative.
+    ///
+    /// Where the phase steps at the sampling instant the sum gives the middle of the step; the detector sees the phase
+    /// before it, half a step lower (that gives the limit of Gardner 1980).
     fn sampled(&self, s: Complex64, pfd_hz: f64) -> Complex64 {
         let half = 0.5 / pfd_hz;
         let origin = coth(s * half);
         let square = origin * origin - 1.0;
         let poles: Complex64 = self.poles.iter().map(|(rate, residue)| coth((s + rate) * half) * *residue).sum();
-        (square * (self.double * half) + origin * self.single + poles) * half
+        (square * (self.double * half) + origin * self.single + poles - self.step) * half
     }
 }
 

@@ -68,9 +68,6 @@ def margins():
     return out
 
 
-def coth(z):
-    return np.cosh(z) / np.sinh(z) if abs(z.real) < 300 else complex(np.sign(z.real))
-
 
 PLAN = {
     "components": {"c1": 2.2e-9, "r2": 510.0, "c2": 15e-9, "r3": 220.0, "c3": 330e-12},
