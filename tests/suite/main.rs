@@ -3,6 +3,7 @@
 #![allow(clippy::unwrap_used, reason = "a test fails by panicking")]
 
 mod cli;
+mod examples;
 mod loops;
 mod modulators;
 mod outside;
