@@ -45,6 +45,12 @@ pub fn run(arguments: &SurveyArguments) -> Result<(), Failure> {
     for warning in &result.warnings {
         voice.say(&format!("warning: {warning}"));
     }
+    if let Some(worst_db) = result.method_check.worst_difference_db {
+        let checked = result.method_check.channels;
+        voice.say(&format!(
+            "method check: {checked} channels against their whole period, worst difference {worst_db:.3} dB"
+        ));
+    }
     voice.say(&verdict_line(&result, &out));
     if arguments.common.json {
         output::print(&survey_json(&result, &options).map_err(report_failure)?)?;
