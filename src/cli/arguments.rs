@@ -23,6 +23,8 @@ pub enum Command {
     Survey(SurveyArguments),
     /// Show one channel in full, with the proof of its verdict
     Channel(ChannelArguments),
+    /// Rank the mechanisms that put a tone at an offset, and name the experiment that tells them apart
+    Identify(IdentifyArguments),
     /// Validate a plan and say what it holds
     Check(PlanArgument),
     /// Print a commented starter plan
@@ -113,4 +115,27 @@ pub struct ChannelArguments {
     #[command(flatten)]
     #[allow(missing_docs, reason = "clap shows the options of the group itself")]
     pub common: CommonOptions,
+}
+
+/// Arguments of `identify`.
+#[derive(Debug, Args)]
+pub struct IdentifyArguments {
+    /// Plan file (TOML)
+    #[arg(value_name = "PLAN", value_hint = ValueHint::FilePath)]
+    pub plan: PathBuf,
+    /// Channel frequency with unit, before injection
+    #[arg(value_name = "FREQUENCY")]
+    pub frequency: String,
+    /// Offset of the observed tone from the carrier, with unit
+    #[arg(value_name = "OFFSET")]
+    pub offset: String,
+    /// Half width of the search window, with unit [default: 1 % of OFFSET, at least 100 Hz]
+    #[arg(long, value_name = "HZ")]
+    pub within: Option<String>,
+    /// Channel group [default: the first whose range holds the frequency]
+    #[arg(long, value_name = "NAME")]
+    pub group: Option<String>,
+    /// Print the result as JSON
+    #[arg(long)]
+    pub json: bool,
 }

@@ -17,7 +17,7 @@ use super::survey::{assess_failure, flagged, in_pool, report_failure};
 /// `Failure` with the exit status that fits.
 pub fn run(arguments: &ChannelArguments) -> Result<(), Failure> {
     let plan = plan_file::read(&arguments.plan)?;
-    let channel = frequency(&arguments.frequency)?;
+    let channel = frequency("FREQUENCY", &arguments.frequency)?;
     let (result, view) = in_pool(arguments.common.jobs, || assess(&plan, channel, arguments.group.as_deref()))??;
     if arguments.common.json {
         output::print(&channel_json(&result, view.as_ref()).map_err(report_failure)?)?;
@@ -36,15 +36,15 @@ pub fn run(arguments: &ChannelArguments) -> Result<(), Failure> {
     flagged(arguments.common.fail_on, bad, marginal)
 }
 
-/// Reads a frequency argument.
+/// Reads a frequency argument; `argument` names it in messages.
 ///
 /// # Errors
 /// `Content` naming what was typed and the units that are accepted.
-fn frequency(typed: &str) -> Result<Frequency, Failure> {
+pub fn frequency(argument: &str, typed: &str) -> Result<Frequency, Failure> {
     match parse_quantity(typed, Dimension::Frequency) {
         Ok(hz) if hz.sign() > 0 => Ok(Frequency::from_hz(hz)),
-        Ok(_) => Err(Failure::Content(format!("error: FREQUENCY \"{typed}\" must be above zero"))),
-        Err(error) => Err(Failure::Content(format!("error: FREQUENCY: {error}"))),
+        Ok(_) => Err(Failure::Content(format!("error: {argument} \"{typed}\" must be above zero"))),
+        Err(error) => Err(Failure::Content(format!("error: {argument}: {error}"))),
     }
 }
 
@@ -70,7 +70,7 @@ fn assess(
 }
 
 /// Returns why no group holds a channel, with the ranges there are.
-fn not_held(plan: &Plan, channel: Frequency, group: Option<&str>) -> String {
+pub fn not_held(plan: &Plan, channel: Frequency, group: Option<&str>) -> String {
     let ranges: Vec<String> = plan
         .groups
         .iter()

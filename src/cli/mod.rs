@@ -3,6 +3,7 @@
 mod arguments;
 mod channel;
 mod failure;
+mod identify;
 mod output;
 mod plan_file;
 mod progress;
@@ -34,6 +35,7 @@ fn dispatch(command: &Command) -> Result<(), Failure> {
     match command {
         Command::Survey(arguments) => survey::run(arguments),
         Command::Channel(arguments) => channel::run(arguments),
+        Command::Identify(arguments) => identify::run(arguments),
         Command::Check(arguments) => plan_file::check(&arguments.plan),
         Command::Example => output::print(&crate::plan::example_plan()),
         Command::Schema => {

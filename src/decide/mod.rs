@@ -1,1 +1,3 @@
-//! (to be filled)
+//! What follows from the stages before: which cause, which choice, which cure.
+
+pub mod identify;

@@ -4,6 +4,7 @@
 
 mod cli;
 mod examples;
+mod identifications;
 mod loops;
 mod modulators;
 mod outside;
