@@ -7,10 +7,11 @@ use crate::loop_model::{LoopResponse, NoiseBudget, NoiseInput, PhaseFigures, log
 use crate::plan::ChannelGroup;
 use crate::spectrum::ideal_density;
 
+use super::channel::Legal;
 use super::lines::FamilyLines;
-use super::placement::Placement;
-use super::result::{Origin, Tone};
-use super::setup::{Setup, gain_at};
+use super::placement::{Placement, place};
+use super::result::{ChannelResult, Origin, Tone};
+use super::setup::{AssessError, Setup, gain_at};
 
 /// Phase figures of one channel at the output.
 #[derive(Debug, Clone)]
@@ -151,4 +152,48 @@ fn with_period_lines(
         figures = figures.with_tone(offset, size * gain * per_output);
     }
     (figures, is_known)
+}
+
+impl Setup<'_> {
+    /// Returns the modulator's own part of a channel's rms phase error \[deg\]: shaped and folded noise or the lines of
+    /// the period, and the modulator and nonlinearity parts of its listed tones; `None` where a part is unknown.
+    ///
+    /// # Errors
+    /// As for the channel itself.
+    pub fn modulator_phase_deg(&self, channel: &ChannelResult) -> Result<Option<f64>, AssessError> {
+        let group = self
+            .plan()
+            .groups
+            .get(channel.group_index)
+            .ok_or(AssessError::NoSuchChannel { group: channel.group_index, index: channel.index })?;
+        let placement = place(self.plan(), group, channel.channel)?;
+        let response = self
+            .response(&placement)
+            .map_err(|source| AssessError::Loop { place: format!("channel {}", channel.channel), source })?;
+        let legal = Legal { setup: self, group, channel: channel.channel, placement: &placement };
+        let lines = legal.lines(channel.pfd_hz, &mut self.scratch())?.map(|(_, lines)| lines);
+        let limits = group.limits.integration_hz;
+        let budget = channel_budget(self, &placement, &response, lines.as_ref(), log_grid(limits.0, limits.1));
+        let own = ["modulator", "folded modulator noise"];
+        if budget.unknown.iter().any(|name| own.contains(&name.as_str())) {
+            return Ok(None);
+        }
+        let mut density = vec![0.0; budget.offset_hz.len()];
+        for source in budget.sources.iter().filter(|source| own.contains(&source.name)) {
+            density.iter_mut().zip(&source.density).for_each(|(sum, part)| *sum += part);
+        }
+        let figures = PhaseFigures::of(&budget.offset_hz, &density, limits);
+        let (mut figures, known) =
+            with_period_lines(figures, self, &placement, &response, lines.as_ref(), (limits, &channel.tones));
+        for tone in &channel.tones {
+            if tone.offset_hz < limits.0 || tone.offset_hz > limits.1 {
+                continue;
+            }
+            let parts = [tone.contributions.modulator_dbc, tone.contributions.nonlinearity_dbc];
+            for level in parts.into_iter().flatten() {
+                figures = figures.with_tone(tone.offset_hz, power_from_db(level));
+            }
+        }
+        Ok(known.then(|| figures.phase_deg()))
+    }
 }

@@ -23,6 +23,8 @@ pub enum Command {
     Survey(SurveyArguments),
     /// Show one channel in full, with the proof of its verdict
     Channel(ChannelArguments),
+    /// Weigh modulators on a plan: structures, orders, dithers, seeds, moduli; ranked with reasons
+    Compare(CompareArguments),
     /// Rank the mechanisms that put a tone at an offset, and name the experiment that tells them apart
     Identify(IdentifyArguments),
     /// Validate a plan and say what it holds
@@ -138,4 +140,36 @@ pub struct IdentifyArguments {
     /// Print the result as JSON
     #[arg(long)]
     pub json: bool,
+}
+
+/// Arguments of `compare`.
+#[derive(Debug, Args)]
+pub struct CompareArguments {
+    /// Plan file (TOML)
+    #[arg(value_name = "PLAN", value_hint = ValueHint::FilePath)]
+    pub plan: PathBuf,
+    /// Structures: mash, prime-mash, output-fed, error-feedback, integer [default: a set of its own]
+    #[arg(long, value_name = "NAME", value_delimiter = ',')]
+    pub structures: Vec<String>,
+    /// Orders
+    #[arg(long, value_name = "N", value_delimiter = ',', value_parser = clap::value_parser!(u8).range(0..=5))]
+    pub orders: Vec<u8>,
+    /// Dithers: none or STAGE:REGISTER:SEED
+    #[arg(long, value_name = "DITHER", value_delimiter = ',')]
+    pub dithers: Vec<String>,
+    /// First seeds
+    #[arg(long, value_name = "SEED", value_delimiter = ',')]
+    pub seeds: Vec<u64>,
+    /// Moduli: whole numbers or 2^b
+    #[arg(long, value_name = "M", value_delimiter = ',')]
+    pub moduli: Vec<String>,
+    /// Channels tried per option at most; a larger plan is thinned evenly, and the output says so
+    #[arg(long, value_name = "N", default_value_t = 200, value_parser = clap::value_parser!(u64).range(1..))]
+    pub sample: u64,
+    /// Folder for compare.html, compare.csv and compare.json [default: reports/<plan stem>]
+    #[arg(long, value_name = "DIR", value_hint = ValueHint::DirPath)]
+    pub out: Option<PathBuf>,
+    #[command(flatten)]
+    #[allow(missing_docs, reason = "clap shows the options of the group itself")]
+    pub common: CommonOptions,
 }

@@ -2,8 +2,10 @@
 
 mod arguments;
 mod channel;
+mod compare;
 mod failure;
 mod identify;
+mod modulator_words;
 mod output;
 mod plan_file;
 mod progress;
@@ -35,6 +37,7 @@ fn dispatch(command: &Command) -> Result<(), Failure> {
     match command {
         Command::Survey(arguments) => survey::run(arguments),
         Command::Channel(arguments) => channel::run(arguments),
+        Command::Compare(arguments) => compare::run(arguments),
         Command::Identify(arguments) => identify::run(arguments),
         Command::Check(arguments) => plan_file::check(&arguments.plan),
         Command::Example => output::print(&crate::plan::example_plan()),

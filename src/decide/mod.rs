@@ -1,3 +1,4 @@
 //! What follows from the stages before: which cause, which choice, which cure.
 
+pub mod compare;
 pub mod identify;

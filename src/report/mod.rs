@@ -2,6 +2,7 @@
 
 mod channel;
 mod columns;
+mod comparison;
 mod document;
 mod error;
 mod figures;
@@ -17,11 +18,12 @@ mod write;
 
 pub use channel::{channel_json, channel_text};
 pub use columns::{COLUMNS, Cell, Column, channels_csv};
+pub use comparison::{comparison_files, comparison_json, comparison_text};
 pub use error::ReportError;
 pub use identification::{identification_json, identification_text};
 pub use json::json_text;
 pub use survey_json::survey_json;
-pub use write::{check_target, write_set};
+pub use write::{add_files, check_target, write_set};
 
 use serde::Serialize;
 

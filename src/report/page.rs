@@ -119,7 +119,7 @@ pub(crate) fn page(result: &SurveyResult, options: &RenderOptions, plots: &[Plot
 }
 
 /// Returns the content-security policy: this one style sheet by its hash, and nothing else from anywhere.
-fn policy(css: &str) -> String {
+pub(super) fn policy(css: &str) -> String {
     let hash = base64(&Sha256::digest(css.as_bytes()));
     format!("default-src 'none'; style-src 'sha256-{hash}'; base-uri 'none'; form-action 'none'")
 }

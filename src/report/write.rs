@@ -4,7 +4,7 @@ use std::fs;
 use std::io;
 use std::path::{Component, Path, PathBuf};
 
-use super::{MARKER, MARKER_HEAD, ReportError, ReportSet};
+use super::{MARKER, MARKER_HEAD, ReportError, ReportFile, ReportSet};
 
 const OLD_KEPT: &str = "what was there before is untouched";
 
@@ -62,6 +62,35 @@ pub fn check_target(out_dir: &Path) -> Result<(), ReportError> {
         return Err(ReportError::NotAFolder { path: existing.to_owned() });
     }
     sibling(existing, ".thornmap-new-").map(drop)
+}
+
+/// Adds files to the folder `out_dir`, beside a report set that may be there; each file is whole or absent.
+///
+/// The folder must be absent, empty, or carry our marker file; it carries it afterwards, and later surveys leave the
+/// files where they are.
+///
+/// # Errors
+/// As [`write_set`]; files written before the failure stay.
+pub fn add_files(out_dir: &Path, files: &[ReportFile]) -> Result<(), ReportError> {
+    let target = resolved(out_dir)?;
+    old_set(&target)?;
+    fs::create_dir_all(&target).map_err(|source| refused(&target, "created", source))?;
+    let marker = target.join(MARKER);
+    if !marker.exists() {
+        fs::write(&marker, format!("{MARKER_HEAD}\n")).map_err(|source| refused(&marker, "written", source))?;
+    }
+    for file in files {
+        let path = target.join(&file.path);
+        // Created in the ordinary way, so that it has the permissions of any file of the user's.
+        let fresh = target.join(format!(".{}.{}.part", file.path, std::process::id()));
+        fs::write(&fresh, &file.bytes).map_err(|source| refused(&fresh, "written", source))?;
+        if let Err(source) = fs::rename(&fresh, &path) {
+            // The failure that matters is the one reported; a leftover is removed where that still works.
+            let _ = fs::remove_file(&fresh);
+            return Err(refused(&path, "written", source));
+        }
+    }
+    Ok(())
 }
 
 /// Returns the absolute path of the output folder, through links, so that the folder itself is swapped and no link.

@@ -1,0 +1,42 @@
+//! Modulator settings as they are typed on the command line.
+
+use crate::modulator::{Dither, Structure};
+
+use super::failure::Failure;
+
+/// Reads a structure's name.
+///
+/// # Errors
+/// `Content` with the names that are known.
+pub fn structure(typed: &str) -> Result<Structure, Failure> {
+    const KNOWN: [Structure; 5] =
+        [Structure::Mash, Structure::PrimeMash, Structure::OutputFed, Structure::ErrorFeedback, Structure::Integer];
+    KNOWN.into_iter().find(|structure| structure.word() == typed).ok_or_else(|| {
+        let words = KNOWN.map(Structure::word).join(", ");
+        Failure::Content(format!("error: structure \"{typed}\": known are {words}"))
+    })
+}
+
+/// Reads `none` or `STAGE:REGISTER:SEED[:WEIGHT]`.
+///
+/// # Errors
+/// `Content` with the form that is expected.
+pub fn dither(typed: &str) -> Result<Dither, Failure> {
+    if typed == "none" {
+        return Ok(Dither::None);
+    }
+    let wrong =
+        || Failure::Content(format!("error: dither \"{typed}\": expected none or STAGE:REGISTER:SEED, as in 2:23:1"));
+    let parts: Vec<u64> = typed.split(':').map(str::parse).collect::<Result<_, _>>().map_err(|_| wrong())?;
+    let (stage, register, seed, weight) = match parts.as_slice() {
+        [stage, register, seed] => (*stage, *register, *seed, 1),
+        [stage, register, seed, weight] => (*stage, *register, *seed, *weight),
+        _ => return Err(wrong()),
+    };
+    Ok(Dither::Register {
+        stage: u8::try_from(stage).map_err(|_| wrong())?,
+        register: u8::try_from(register).map_err(|_| wrong())?,
+        seed,
+        weight,
+    })
+}
