@@ -13,7 +13,7 @@ mod view;
 mod whole_period;
 
 pub use lines::{FamilyLines, Line, LinesError, PeriodLine, Scratch};
-pub use noise::{ChannelNoise, channel_budget};
+pub use noise::{ChannelNoise, ModulatorShare, channel_budget};
 pub use placement::{Placement, PlacementError, place};
 pub use result::{BoundaryNear, ChannelResult, Contributions, Illegal, Method, Origin, Reason, Rule, Tone, Verdict};
 pub use setup::{AssessError, LoopSource, Setup, gain_at};

@@ -2,7 +2,7 @@
 
 use std::f64::consts::TAU;
 
-use crate::base::power_from_db;
+use crate::base::{db_from_power, power_from_db};
 use crate::loop_model::{LoopResponse, NoiseBudget, NoiseInput, PhaseFigures, log_grid, noise_budget};
 use crate::plan::ChannelGroup;
 use crate::spectrum::ideal_density;
@@ -24,6 +24,17 @@ pub struct ChannelNoise {
     pub known_with_tones: PhaseFigures,
     /// What is unknown.
     pub unknown: Vec<String>,
+}
+
+/// What the modulator alone does to a channel, at the output.
+#[derive(Debug, Clone, Copy, PartialEq)]
+pub struct ModulatorShare {
+    /// Its part of the rms phase error \[deg\]: shaped and folded noise or the lines of its period, and the modulator
+    /// and nonlinearity parts of the listed tones; `None` where a part is unknown.
+    pub phase_deg: Option<f64>,
+    /// Its highest noise density up to the loop edge, shaped and folded \[dBc/Hz\]; `None` where a part is unknown, and
+    /// for a period with lines instead of noise.
+    pub in_loop_noise_dbc_per_hz: Option<f64>,
 }
 
 /// Returns the noise budget of a channel on a grid of offsets \[Hz\].
@@ -155,12 +166,11 @@ fn with_period_lines(
 }
 
 impl Setup<'_> {
-    /// Returns the modulator's own part of a channel's rms phase error \[deg\]: shaped and folded noise or the lines of
-    /// the period, and the modulator and nonlinearity parts of its listed tones; `None` where a part is unknown.
+    /// Returns what the modulator alone does to a channel.
     ///
     /// # Errors
     /// As for the channel itself.
-    pub fn modulator_phase_deg(&self, channel: &ChannelResult) -> Result<Option<f64>, AssessError> {
+    pub fn modulator_share(&self, channel: &ChannelResult) -> Result<ModulatorShare, AssessError> {
         let group = self
             .plan()
             .groups
@@ -176,7 +186,7 @@ impl Setup<'_> {
         let budget = channel_budget(self, &placement, &response, lines.as_ref(), log_grid(limits.0, limits.1));
         let own = ["modulator", "folded modulator noise"];
         if budget.unknown.iter().any(|name| own.contains(&name.as_str())) {
-            return Ok(None);
+            return Ok(ModulatorShare { phase_deg: None, in_loop_noise_dbc_per_hz: None });
         }
         let mut density = vec![0.0; budget.offset_hz.len()];
         for source in budget.sources.iter().filter(|source| own.contains(&source.name)) {
@@ -194,6 +204,14 @@ impl Setup<'_> {
                 figures = figures.with_tone(tone.offset_hz, power_from_db(level));
             }
         }
-        Ok(known.then(|| figures.phase_deg()))
+        let edge_hz = channel.loop_edge_hz.unwrap_or(0.0);
+        let in_loop = budget
+            .offset_hz
+            .iter()
+            .zip(&density)
+            .filter(|(offset, level)| **offset <= edge_hz && **level > 0.0)
+            .map(|(_, level)| db_from_power(*level))
+            .reduce(f64::max);
+        Ok(ModulatorShare { phase_deg: known.then(|| figures.phase_deg()), in_loop_noise_dbc_per_hz: in_loop })
     }
 }

@@ -1,6 +1,7 @@
 //! Modulators compared: text, CSV, JSON and a page from one result.
 
 use askama::Template;
+use num_bigint::BigUint;
 use serde_json::json;
 
 use super::json::json_text;
@@ -13,7 +14,7 @@ use crate::plan::Plan;
 /// The columns of every table: name in the CSV, heading for readers, cell.
 type Column = (&'static str, &'static str, fn(&Ranked) -> String);
 
-const COLUMNS: [Column; 13] = [
+const COLUMNS: [Column; 15] = [
     ("option", "Option", |r| r.option.name()),
     ("bad", "Bad", |r| r.figures.bad.to_string()),
     ("marginal", "Marginal", |r| r.figures.marginal.to_string()),
@@ -21,6 +22,10 @@ const COLUMNS: [Column; 13] = [
     ("worst_margin_db", "Worst margin [dB]", |r| figure(r.figures.worst_margin_db, 2)),
     ("worst_in_loop_dbc", "Strongest own line in the loop [dBc]", |r| figure(r.figures.worst_in_loop_dbc, 1)),
     ("modulator_phase_deg", "Modulator phase error [deg]", |r| figure(r.figures.modulator_phase_deg, 4)),
+    ("in_loop_noise_dbc_per_hz", "Modulator noise in the loop [dBc/Hz]", |r| {
+        figure(r.figures.in_loop_noise_dbc_per_hz, 1)
+    }),
+    ("known_phase_error_deg", "Known phase error [deg]", |r| figure(r.figures.known_phase_error_deg, 4)),
     ("phase_error_deg", "Phase error [deg]", |r| figure(r.figures.phase_error_deg, 4)),
     ("shortest_sequence", "Shortest sequence [cycles]", |r| {
         r.figures.shortest_sequence.as_ref().map_or_else(String::new, ToString::to_string)
@@ -41,6 +46,12 @@ fn for_readers(cell: String) -> String {
     if cell.is_empty() { "unknown".to_owned() } else { cell }
 }
 
+/// Returns a length of a sequence in a narrow column; a long one in powers of ten.
+fn short_length(length: &BigUint) -> String {
+    let digits = length.to_string();
+    if digits.len() <= 12 { digits } else { format!("{}.{}e{}", &digits[..1], &digits[1..3], digits.len() - 1) }
+}
+
 /// Returns the sample in a sentence.
 fn sample(comparison: &Comparison) -> String {
     let sample = &comparison.sample;
@@ -52,11 +63,26 @@ fn sample(comparison: &Comparison) -> String {
 pub fn comparison_text(plan: &Plan, comparison: &Comparison) -> String {
     let mut text =
         format!("{}: modulators compared. {}\nranking: {RANKING_RULE}\n", plan.identity.title, sample(comparison));
+    text.push_str(
+        "\n          bad  marg.  clear  worst margin  line in loop  mod. phase  shortest sequence     outputs  bits\n",
+    );
+    let dash = |cell: String| if cell.is_empty() { "-".to_owned() } else { cell };
     for entry in &comparison.ranked {
-        text.push_str(&format!("\n{:>2}. {}\n", entry.place, entry.option.name()));
-        let cells: Vec<String> =
-            COLUMNS[1..].iter().map(|(name, _, cell)| format!("{name} {}", for_readers(cell(entry)))).collect();
-        text.push_str(&format!("    {}\n    {}\n", cells.join(", "), entry.reason));
+        let figures = &entry.figures;
+        text.push_str(&format!("{:>2}. {}\n", entry.place, entry.option.name()));
+        text.push_str(&format!(
+            "    {:>9} {:>6} {:>6} {:>10} dB {:>9} dBc {:>7} deg {:>18} {:>11} {:>5}\n",
+            figures.bad,
+            figures.marginal,
+            figures.clear,
+            dash(figure(figures.worst_margin_db, 1)),
+            dash(figure(figures.worst_in_loop_dbc, 1)),
+            dash(figure(figures.modulator_phase_deg, 3)),
+            figures.shortest_sequence.as_ref().map_or_else(|| "-".to_owned(), short_length),
+            format!("{} to {}", figures.output_range.0, figures.output_range.1),
+            entry.option.accumulator_bits(),
+        ));
+        text.push_str(&format!("    {}\n", entry.reason));
     }
     for refused in &comparison.refused {
         text.push_str(&format!("\nnot possible: {}: {}\n", refused.option.name(), refused.reason));

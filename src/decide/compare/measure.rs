@@ -32,7 +32,7 @@ impl Sample {
         sampled.groups = plan.groups.iter().map(|group| thinned(group, total, largest)).collect();
         let channels = sampled.groups.iter().map(|group| group.channels.len()).sum();
         let rule =
-            format!("stratified: every {}th channel of each group, first and last always", total.div_ceil(largest));
+            format!("stratified: one channel in {} of each group, first and last always", total.div_ceil(largest));
         (sampled, Self { channels, of: total, rule })
     }
 }
@@ -63,7 +63,12 @@ pub struct Figures {
     pub worst_in_loop_dbc: Option<f64>,
     /// Largest part of the modulator in the rms phase error, noise and its tones \[deg\].
     pub modulator_phase_deg: Option<f64>,
-    /// Largest rms phase error with tones \[deg\].
+    /// Largest noise density of the modulator up to the loop edge, shaped and folded \[dBc/Hz\]; `None` where no
+    /// channel has noise (short periods have lines instead).
+    pub in_loop_noise_dbc_per_hz: Option<f64>,
+    /// Largest rms phase error of the known sources and tones \[deg\].
+    pub known_phase_error_deg: Option<f64>,
+    /// Largest rms phase error with tones \[deg\]; `None` where one of them is unknown.
     pub phase_error_deg: Option<f64>,
     /// Shortest sequence over the sample \[cycles\]; `None` where one is not known.
     #[serde(serialize_with = "big")]
@@ -108,8 +113,7 @@ pub(super) fn measure(plan: &Plan) -> Result<Figures, AssessError> {
             [tone.contributions.modulator_dbc, tone.contributions.nonlinearity_dbc].into_iter().flatten()
         });
     let running: Vec<_> = legal.iter().filter(|channel| channel.k.is_some_and(|k| k > 0)).collect();
-    let modulator_phase =
-        running.iter().map(|channel| setup.modulator_phase_deg(channel)).collect::<Result<Vec<_>, _>>()?;
+    let shares = running.iter().map(|channel| setup.modulator_share(channel)).collect::<Result<Vec<_>, _>>()?;
     let is_integer = plan.modulator.settings.structure == Structure::Integer;
     Ok(Figures {
         bad: result.summary.bad,
@@ -121,7 +125,13 @@ pub(super) fn measure(plan: &Plan) -> Result<Figures, AssessError> {
             .filter_map(|tone| tone.margin_db)
             .reduce(f64::min),
         worst_in_loop_dbc: in_loop.reduce(f64::max),
-        modulator_phase_deg: if is_integer { Some(0.0) } else { largest(modulator_phase) },
+        modulator_phase_deg: if is_integer {
+            Some(0.0)
+        } else {
+            largest(shares.iter().map(|share| share.phase_deg).collect())
+        },
+        in_loop_noise_dbc_per_hz: shares.iter().filter_map(|share| share.in_loop_noise_dbc_per_hz).reduce(f64::max),
+        known_phase_error_deg: largest(legal.iter().map(|channel| channel.phase_error_known_deg).collect()),
         phase_error_deg: largest(legal.iter().map(|channel| channel.phase_error_with_tones_deg).collect()),
         shortest_sequence: running
             .iter()

@@ -78,6 +78,7 @@ pub fn compare(
     measured.sort_by(|a, b| {
         order_of(&a.1, &b.1)
             .then_with(|| a.0.accumulator_bits().cmp(&b.0.accumulator_bits()))
+            .then_with(|| b.0.has_odd_seed().cmp(&a.0.has_odd_seed()))
             .then_with(|| a.0.name().cmp(&b.0.name()))
     });
     let ranked: Vec<Ranked> = measured

@@ -47,6 +47,30 @@ impl ModulatorOption {
         format!("{} order {}, {modulus}, {seeds}, {dither}", settings.structure.word(), settings.order)
     }
 
+    /// Returns whether two options are the same machine: seeds that are not given are 0.
+    pub(super) fn runs_like(&self, other: &Self) -> bool {
+        let seeds = |option: &Self| {
+            let mut seeds = option.settings.seeds.clone();
+            seeds.resize(usize::from(option.settings.order), 0);
+            ModulatorSettings { seeds, ..option.settings.clone() }
+        };
+        self.modulus == other.modulus && seeds(self) == seeds(other)
+    }
+
+    /// Returns whether this is a MASH of the given order with an odd first seed and no dither.
+    pub(super) fn is_plain_mash(&self, order: u8) -> bool {
+        let settings = &self.settings;
+        settings.structure == Structure::Mash
+            && settings.order == order
+            && settings.dither == Dither::None
+            && self.has_odd_seed()
+    }
+
+    /// Returns whether the first seed is odd.
+    pub(super) fn has_odd_seed(&self) -> bool {
+        self.settings.seeds.first().is_some_and(|seed| seed % 2 == 1)
+    }
+
     /// Returns the bits of all accumulators together, dither register included.
     #[must_use]
     pub fn accumulator_bits(&self) -> u64 {
@@ -92,7 +116,7 @@ pub fn default_options(plan: &Plan) -> Vec<ModulatorOption> {
     let mut options = vec![ModulatorOption { settings: own.settings.clone(), modulus: own.modulus }];
     let mut add = |settings: ModulatorSettings| {
         let option = ModulatorOption { settings, modulus: own.modulus };
-        if !options.contains(&option) {
+        if !options.iter().any(|present| present.runs_like(&option)) {
             options.push(option);
         }
     };

@@ -2,14 +2,15 @@
 
 use std::cmp::Ordering;
 
-use super::Ranked;
 use super::gains::OrderGain;
 use super::measure::Figures;
+use super::{ModulatorOption, Ranked};
 use crate::plan::Plan;
 
 /// The rule in words, as every output states it.
 pub const RANKING_RULE: &str = "fewest bad channels, then fewest marginal, then the larger worst margin (steps of 1 dB), \
-     then the smaller modulator phase error (steps of 1 %), then the longer shortest sequence, then fewer accumulator bits";
+     then the smaller modulator phase error (steps of 1 %), then the longer shortest sequence, then fewer accumulator bits, \
+     then an odd first seed (its sequence is never shorter)";
 
 /// Returns which figures rank first.
 pub(super) fn order_of(a: &Figures, b: &Figures) -> Ordering {
@@ -81,9 +82,8 @@ pub(super) fn recommendation(plan: &Plan, ranked: &[Ranked], gains: &[OrderGain]
         return "no option works on this plan".to_owned();
     };
     let mut text = format!("take {}", best.option.name());
-    let own = ranked.iter().find(|entry| {
-        entry.option.settings == plan.modulator.settings && entry.option.modulus == plan.modulator.modulus
-    });
+    let planned = ModulatorOption { settings: plan.modulator.settings.clone(), modulus: plan.modulator.modulus };
+    let own = ranked.iter().find(|entry| entry.option.runs_like(&planned));
     match own {
         Some(own) if own.place == 1 => text.push_str(" (the plan's own)"),
         Some(own) => text.push_str(&format!(
@@ -100,13 +100,31 @@ pub(super) fn recommendation(plan: &Plan, ranked: &[Ranked], gains: &[OrderGain]
         text.push_str(" What stays bad is not the modulator's doing alone: coupling at boundaries needs another reference or channel.");
     }
     for gain in gains.iter().filter(|gain| gain.order > 3) {
-        text.push_str(&format!(
-            " Order {} lowers the mismatch tone at h = 1 by {:.1} dB against order 3 and needs outputs {} to {} (order 3: -3 to 4).",
-            gain.order, gain.gain_over_three_db, gain.output_range.0, gain.output_range.1
-        ));
+        text.push_str(&gain_sentence(gain, ranked));
     }
     text.push_str(
         " What would change the choice: a lower pump mismatch or an offset current beyond the kink (then the order decides only the shaped noise), a wider loop (favours lower orders), a divider that cannot span the outputs of a high order, or an anchor that shows more coupling.",
     );
+    text
+}
+
+/// Returns what one order gains over order 3 and what it costs, from the computed figures.
+fn gain_sentence(gain: &OrderGain, ranked: &[Ranked]) -> String {
+    let mut text = format!(
+        " Order {} lowers the mismatch tone at h = 1 by {:.1} dB against order 3; it costs outputs from {} to {} (order 3: -3 to 4) and {} VCO cycles of static offset to clear the pump's kink (order 3: 2)",
+        gain.order, gain.gain_over_three_db, gain.output_range.0, gain.output_range.1, gain.clearing_offset_cycles
+    );
+    let phase = |order| {
+        ranked
+            .iter()
+            .find(|entry| entry.option.is_plain_mash(order))
+            .and_then(|entry| entry.figures.modulator_phase_deg)
+    };
+    match (phase(gain.order), phase(3)) {
+        (Some(own), Some(third)) => {
+            text.push_str(&format!(", and the modulator's phase error becomes {own:.3}° (order 3: {third:.3}°)."));
+        }
+        _ => text.push('.'),
+    }
     text
 }
