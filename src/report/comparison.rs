@@ -87,7 +87,7 @@ pub fn comparison_text(plan: &Plan, comparison: &Comparison) -> String {
     for refused in &comparison.refused {
         text.push_str(&format!("\nnot possible: {}: {}\n", refused.option.name(), refused.reason));
     }
-    text.push_str(&format!("\n{}\n", comparison.recommendation));
+    text.push_str(&format!("\n{}\n", comparison.recommendation.join("\n")));
     text
 }
 
@@ -155,7 +155,7 @@ struct Page<'a> {
     policy: String,
     css: String,
     title: &'a str,
-    recommendation: &'a str,
+    recommendation: &'a [String],
     sample: String,
     rule: &'a str,
     columns: Vec<&'static str>,

@@ -111,7 +111,7 @@ fn the_gains_of_orders_four_and_five_are_those_of_an_independent_quadrature() {
 fn the_recommendation_speaks_from_the_figures() {
     let plan = plan(PLAN);
     let found = compared(&plan, &default_options(&plan), 1000);
-    let text = &found.recommendation;
+    let text = found.recommendation.join("\n");
     for part in ["Order 4 lowers the mismatch tone at h = 1 by 3.9 dB", "Order 5", "10.1 dB", "-7 to 8", "-15 to 16"] {
         assert!(text.contains(part), "{part}: {text}");
     }
@@ -125,7 +125,7 @@ fn the_recommendation_speaks_from_the_figures() {
     };
     assert!(text.contains(&format!("phase error becomes {:.3}° (order 3: {:.3}°)", phase(4), phase(3))), "{text}");
     assert!(text.contains("What would change the choice"), "{text}");
-    assert!(text.starts_with(&format!("take {}", found.ranked[0].option.name())), "{text}");
+    assert!(text.starts_with(&format!("Take {}", found.ranked[0].option.name())), "{text}");
 }
 
 #[test]

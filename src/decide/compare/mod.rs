@@ -44,8 +44,8 @@ pub struct Comparison {
     pub refused: Vec<Refused>,
     /// What orders gain against pump mismatch and what they cost, from computed curves.
     pub order_gains: Vec<OrderGain>,
-    /// What to take, and what would change that, in words.
-    pub recommendation: String,
+    /// What to take, and what would change that: paragraphs, the choice first.
+    pub recommendation: Vec<String>,
     /// Every input the figures rest on.
     pub assumptions: Vec<Assumption>,
 }

@@ -76,42 +76,43 @@ pub fn reason_for(figures: &Figures, next: Option<&Figures>) -> String {
     format!("{own}: as good as the next, with no more accumulator bits")
 }
 
-/// Returns what to take, and what would change that.
-pub(super) fn recommendation(plan: &Plan, ranked: &[Ranked], gains: &[OrderGain]) -> String {
+/// Returns what to take, and what would change that: a paragraph each, the choice first.
+pub(super) fn recommendation(plan: &Plan, ranked: &[Ranked], gains: &[OrderGain]) -> Vec<String> {
     let Some(best) = ranked.first() else {
-        return "no option works on this plan".to_owned();
+        return vec!["No option works on this plan.".to_owned()];
     };
-    let mut text = format!("take {}", best.option.name());
+    let mut choice = format!("Take {}", best.option.name());
     let planned = ModulatorOption { settings: plan.modulator.settings.clone(), modulus: plan.modulator.modulus };
     let own = ranked.iter().find(|entry| entry.option.runs_like(&planned));
     match own {
-        Some(own) if own.place == 1 => text.push_str(" (the plan's own)"),
-        Some(own) => text.push_str(&format!(
+        Some(own) if own.place == 1 => choice.push_str(" (the plan's own)"),
+        Some(own) => choice.push_str(&format!(
             " instead of the plan's own, which is number {} with {} bad and {} marginal channels",
             own.place, own.figures.bad, own.figures.marginal
         )),
         None => {}
     }
-    text.push_str(&format!(
-        ". On the sample it leaves {} bad and {} marginal channels.",
-        best.figures.bad, best.figures.marginal
-    ));
+    let (bad, marginal) = (best.figures.bad, best.figures.marginal);
+    choice.push_str(&format!(". On the sample it leaves {bad} bad and {marginal} marginal channels."));
+    let mut paragraphs = vec![choice];
     if best.figures.bad > 0 {
-        text.push_str(" What stays bad is not the modulator's doing alone: coupling at boundaries needs another reference or channel.");
+        paragraphs.push(
+            "What stays bad is not the modulator's doing alone: coupling at boundaries needs another reference or channel."
+                .to_owned(),
+        );
     }
-    for gain in gains.iter().filter(|gain| gain.order > 3) {
-        text.push_str(&gain_sentence(gain, ranked));
-    }
-    text.push_str(
-        " What would change the choice: a lower pump mismatch or an offset current beyond the kink (then the order decides only the shaped noise), a wider loop (favours lower orders), a divider that cannot span the outputs of a high order, or an anchor that shows more coupling.",
+    paragraphs.extend(gains.iter().filter(|gain| gain.order > 3).map(|gain| gain_sentence(gain, ranked)));
+    paragraphs.push(
+        "What would change the choice: a lower pump mismatch or an offset current beyond the kink (then the order decides only the shaped noise), a wider loop (favours lower orders), a divider that cannot span the outputs of a high order, or an anchor that shows more coupling."
+            .to_owned(),
     );
-    text
+    paragraphs
 }
 
 /// Returns what one order gains over order 3 and what it costs, from the computed figures.
 fn gain_sentence(gain: &OrderGain, ranked: &[Ranked]) -> String {
     let mut text = format!(
-        " Order {} lowers the mismatch tone at h = 1 by {:.1} dB against order 3; it costs outputs from {} to {} (order 3: -3 to 4) and {} VCO cycles of static offset to clear the pump's kink (order 3: 2)",
+        "Order {} lowers the mismatch tone at h = 1 by {:.1} dB against order 3; it costs outputs from {} to {} (order 3: -3 to 4) and {} VCO cycles of static offset to clear the pump's kink (order 3: 2)",
         gain.order, gain.gain_over_three_db, gain.output_range.0, gain.output_range.1, gain.clearing_offset_cycles
     );
     let phase = |order| {
