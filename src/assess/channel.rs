@@ -146,6 +146,17 @@ fn identity(
     }
 }
 
+/// Returns the loop edge of a response \[Hz\]; `None` where it has none.
+#[must_use]
+pub fn edge_of(edge: LoopEdge, response: &LoopResponse) -> Option<f64> {
+    match edge {
+        LoopEdge::UnityGain => response.unity_gain_hz(),
+        LoopEdge::ThreeDb => response.closed_loop_3db_hz(),
+    }
+    // A measured response has no unity-gain frequency: its 3 dB frequency stands in, as the outputs say.
+    .or(response.closed_loop_3db_hz())
+}
+
 /// A channel with a legal word, on its way through the stages.
 pub(super) struct Legal<'a> {
     /// The plan made ready.
@@ -197,12 +208,7 @@ impl Legal<'_> {
     /// Returns guard and loop edge of the channel.
     fn zone(&self, response: &LoopResponse) -> Zone {
         let boundary = &self.plan().boundary;
-        let edge_hz = match boundary.edge {
-            LoopEdge::UnityGain => response.unity_gain_hz(),
-            LoopEdge::ThreeDb => response.closed_loop_3db_hz(),
-        }
-        // A measured response has no unity-gain frequency: its 3 dB frequency stands in, as the outputs say.
-        .or(response.closed_loop_3db_hz());
+        let edge_hz = edge_of(boundary.edge, response);
         let guard = match boundary.guard {
             Guard::LoopEdge => None,
             Guard::Offset(offset) => Some(offset),

@@ -12,11 +12,12 @@ mod verdict;
 mod view;
 mod whole_period;
 
+pub use channel::edge_of;
 pub use lines::{FamilyLines, Line, LinesError, PeriodLine, Scratch};
 pub use noise::{ChannelNoise, ModulatorShare, channel_budget};
 pub use placement::{Placement, PlacementError, place};
 pub use result::{BoundaryNear, ChannelResult, Contributions, Illegal, Method, Origin, Reason, Rule, Tone, Verdict};
-pub use setup::{AssessError, LoopSource, Setup, gain_at};
+pub use setup::{AssessError, LoopSource, Setup, gain_at, interpolate};
 pub use verdict::{Evidence, MaskState, judge};
 pub use view::{SpectrumView, spectrum_view};
 pub use whole_period::LineCheck;

@@ -53,6 +53,14 @@ pub enum AssessError {
         /// What failed.
         source: ExactError,
     },
+    /// A measured response that is asked for at another PFD frequency.
+    #[error("the measured response belongs to a PFD frequency of {measured}; at {asked} it is unknown")]
+    MeasuredElsewhere {
+        /// PFD frequency of the board.
+        measured: Frequency,
+        /// PFD frequency asked for.
+        asked: Frequency,
+    },
     /// A channel that the plan does not hold.
     #[error("group {group} has no channel {index}")]
     NoSuchChannel {
@@ -129,6 +137,35 @@ impl<'p> Setup<'p> {
         };
         setup.carry_anchors()?;
         Ok(setup)
+    }
+
+    /// Returns another plan made ready on the hardware of this one: its filter and its coupling levels stay as they are
+    /// here, whatever word, PFD frequency or modulator the other plan sets.
+    ///
+    /// # Errors
+    /// As [`Setup::new`]; `MeasuredElsewhere` for a measured response at another PFD frequency.
+    pub fn on_same_board<'q>(&self, plan: &'q Plan) -> Result<Setup<'q>, AssessError> {
+        let (smallest, largest) = legal_ratios(plan)?;
+        let pfd =
+            plan.reference.pfd().map_err(|source| AssessError::Exact { channel: plan.reference.frequency, source })?;
+        if matches!(self.source, LoopSource::Measured(_)) && pfd != self.pfd {
+            return Err(AssessError::MeasuredElsewhere { measured: self.pfd, asked: pfd });
+        }
+        let design_divider = (smallest * largest).sqrt();
+        let design_response = response_of(plan, &self.source, design_divider, pfd)
+            .map_err(|source| AssessError::Loop { place: "the middle of the channels".to_owned(), source })?;
+        Ok(Setup {
+            plan,
+            pfd,
+            source: self.source.clone(),
+            components: self.components,
+            design_divider,
+            warnings: design_response.warnings(),
+            design_response,
+            anchors: self.anchors.clone(),
+            clock_anchors: self.clock_anchors.clone(),
+            fft: FftStage::new(),
+        })
     }
 
     /// Returns the plan.
@@ -222,6 +259,14 @@ impl<'p> Setup<'p> {
             );
         }
         list
+    }
+
+    /// Returns the loop of another plan on this filter, at a divider and PFD frequency of its own.
+    ///
+    /// # Errors
+    /// `LoopModelError`: an unstable loop above all.
+    pub fn response_of(&self, plan: &Plan, divider: f64, pfd: Frequency) -> Result<LoopResponse, LoopModelError> {
+        response_of(plan, &self.source, divider, pfd)
     }
 
     /// Returns the loop of a placed channel.
@@ -327,7 +372,7 @@ pub fn gain_at(gain: &Gain, frequency_hz: f64) -> f64 {
 }
 
 /// Returns the value at `x`: linear between points that rise in x, end values held.
-pub(super) fn interpolate(points: &[(f64, f64)], x: f64) -> f64 {
+pub fn interpolate(points: &[(f64, f64)], x: f64) -> f64 {
     let after = points.partition_point(|(at, _)| *at <= x);
     match (after.checked_sub(1).and_then(|i| points.get(i)), points.get(after)) {
         (Some((x0, y0)), Some((x1, y1))) => y0 + (y1 - y0) * (x - x0) / (x1 - x0),

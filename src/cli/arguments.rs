@@ -25,6 +25,8 @@ pub enum Command {
     Channel(ChannelArguments),
     /// Weigh modulators on a plan: structures, orders, dithers, seeds, moduli; ranked with reasons
     Compare(CompareArguments),
+    /// Find the cheapest cure of each bad channel, and the smallest set of PFD frequencies that leaves none bad
+    Remedy(RemedyArguments),
     /// Rank the mechanisms that put a tone at an offset, and name the experiment that tells them apart
     Identify(IdentifyArguments),
     /// Validate a plan and say what it holds
@@ -167,6 +169,45 @@ pub struct CompareArguments {
     #[arg(long, value_name = "N", default_value_t = 200, value_parser = clap::value_parser!(u64).range(1..))]
     pub sample: u64,
     /// Folder for compare.html, compare.csv and compare.json [default: reports/<plan stem>]
+    #[arg(long, value_name = "DIR", value_hint = ValueHint::DirPath)]
+    pub out: Option<PathBuf>,
+    #[command(flatten)]
+    #[allow(missing_docs, reason = "clap shows the options of the group itself")]
+    pub common: CommonOptions,
+}
+
+/// What counts as bad where sets of PFD settings are weighed.
+#[derive(Debug, Clone, Copy, PartialEq, Eq, ValueEnum)]
+pub enum ByChoice {
+    /// The verdict of each channel, assessed in full
+    Verdict,
+    /// Position alone: no legal word, or a tone inside the guard
+    Guard,
+}
+
+/// Arguments of `remedy`.
+#[derive(Debug, Args)]
+pub struct RemedyArguments {
+    /// Plan file (TOML); its [alternatives] say what may change
+    #[arg(value_name = "PLAN", value_hint = ValueHint::FilePath)]
+    pub plan: PathBuf,
+    /// What counts as bad where sets of PFD settings are weighed [default: verdict up to 40,000 channel-setting pairs]
+    #[arg(long, value_name = "WHAT")]
+    pub by: Option<ByChoice>,
+    /// Cost of one kind of change, for example order=5; a cure costs the sum (kinds: seed, dither, order, modulus,
+    /// offset-current, injection, nudge, output-divider, divider, reference)
+    #[arg(long, value_name = "KIND=COST")]
+    pub cost: Vec<String>,
+    /// Try reference frequencies by position: "10 MHz..52 MHz" with --step, or a list "19.2 MHz, 20 MHz"
+    #[arg(long, value_name = "RANGE", conflicts_with_all = ["intervals", "by", "cost"])]
+    pub hunt: Option<String>,
+    /// Step of the hunt, with unit
+    #[arg(long, value_name = "HZ", requires = "hunt")]
+    pub step: Option<String>,
+    /// Show what is lost to each fraction p/q as intervals; enumerates no channel, so a raster may be as dense as it likes
+    #[arg(long, conflicts_with_all = ["by", "cost"])]
+    pub intervals: bool,
+    /// Folder for remedy.html, remedy.csv and remedy.json [default: reports/<plan stem>]
     #[arg(long, value_name = "DIR", value_hint = ValueHint::DirPath)]
     pub out: Option<PathBuf>,
     #[command(flatten)]

@@ -9,6 +9,7 @@ mod modulator_words;
 mod output;
 mod plan_file;
 mod progress;
+mod remedy;
 mod survey;
 
 use std::process::ExitCode;
@@ -38,6 +39,7 @@ fn dispatch(command: &Command) -> Result<(), Failure> {
         Command::Survey(arguments) => survey::run(arguments),
         Command::Channel(arguments) => channel::run(arguments),
         Command::Compare(arguments) => compare::run(arguments),
+        Command::Remedy(arguments) => remedy::run(arguments),
         Command::Identify(arguments) => identify::run(arguments),
         Command::Check(arguments) => plan_file::check(&arguments.plan),
         Command::Example => output::print(&crate::plan::example_plan()),

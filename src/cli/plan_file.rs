@@ -3,7 +3,7 @@
 use std::io::IsTerminal;
 use std::path::Path;
 
-use crate::plan::{Colour, Plan, PlanFailure, read_plan_file, render_problems};
+use crate::plan::{Colour, Plan, PlanFailure, read_dense_plan_file, read_plan_file, render_problems};
 
 use super::failure::Failure;
 use super::output;
@@ -13,14 +13,26 @@ use super::output;
 /// # Errors
 /// `InputOutput` when the file cannot be read, `Content` with every problem of the plan under its line.
 pub fn read(path: &Path) -> Result<Plan, Failure> {
-    read_plan_file(path).map_err(|failure| match failure {
+    read_plan_file(path).map_err(explained)
+}
+
+/// Reads and checks a plan of which no channel will be enumerated.
+///
+/// # Errors
+/// As `read`.
+pub fn read_dense(path: &Path) -> Result<Plan, Failure> {
+    read_dense_plan_file(path).map_err(explained)
+}
+
+fn explained(failure: PlanFailure) -> Failure {
+    match failure {
         PlanFailure::Io { .. } => Failure::InputOutput(format!("error: {failure}")),
         PlanFailure::Content { problems, source_name, text } => {
             let in_colour = std::io::stderr().is_terminal() && std::env::var_os("NO_COLOR").is_none();
             let colour = if in_colour { Colour::Styled } else { Colour::Plain };
             Failure::Content(render_problems(&problems, &source_name, &text, colour))
         }
-    })
+    }
 }
 
 /// Runs `check`: says what a valid plan holds.

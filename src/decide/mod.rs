@@ -2,3 +2,4 @@
 
 pub mod compare;
 pub mod identify;
+pub mod remedy;

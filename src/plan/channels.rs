@@ -9,6 +9,8 @@ use super::tables::{Load, read_channels};
 
 /// Channels that one plan may hold.
 pub const MOST_CHANNELS: u64 = 10_000_000;
+/// Channels that a plan may hold where none is enumerated.
+pub const MOST_DENSE_CHANNELS: u64 = 1 << 53;
 
 /// Reads one `[[channels]]`; `number` counts from 1.
 pub fn group(
@@ -121,9 +123,10 @@ fn raster(reader: &mut Reader, section: &Section) -> Option<ChannelList> {
         reader.problem(&section.key("spacing"), &spacing.span, "the raster has too many channels");
         return None;
     };
-    if count > MOST_CHANNELS {
-        let text = format!("the raster has {count} channels, at most {MOST_CHANNELS} are allowed");
-        reader.problem(&section.key("spacing"), &spacing.span, text);
+    if count > reader.most_channels {
+        let text = format!("the raster has {count} channels, at most {} are allowed", reader.most_channels);
+        let hint = (count <= MOST_DENSE_CHANNELS).then(|| "remedy --intervals takes it".to_owned());
+        reader.problem_with_hint(&section.key("spacing"), &spacing.span, text, hint);
         return None;
     }
     if !steps.is_integer() {

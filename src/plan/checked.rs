@@ -6,7 +6,7 @@ use serde::Serialize;
 
 use crate::base::{Assumption, Basis, Exact, Frequency};
 use crate::loop_model::{ChargeTable, FilterComponents, FilterDesign, NoisePoints, OscillatorNoise, ResponseTable};
-use crate::modulator::{Dither, ModulatorSettings, ModulusRule};
+use crate::modulator::{Dither, ModulatorSettings, Modulus, ModulusRule};
 use crate::tones::Mechanism;
 
 /// A whole checked plan.
@@ -415,6 +415,14 @@ pub struct Alternatives {
     /// Injections; the groups' own when empty.
     #[serde(rename = "injections_exact")]
     pub injections: Vec<Frequency>,
+    /// Output dividers; the groups' own when empty.
+    pub output_dividers: Vec<u64>,
+    /// First seeds; the plan's own when empty.
+    pub seeds: Vec<u64>,
+    /// Fixed moduli; the plan's own rule when empty.
+    pub moduli: Vec<Modulus>,
+    /// Offset currents \[A\]; the plan's own when empty.
+    pub offset_currents_a: Vec<f64>,
     /// Largest permitted shift of the output frequency.
     #[serde(rename = "nudge_exact")]
     pub nudge: Frequency,

@@ -1,7 +1,7 @@
 //! Title block, alternatives and analysis.
 
 use crate::base::Frequency;
-use crate::modulator::{Dither, ModulatorError, ModulatorSettings};
+use crate::modulator::{Dither, ModulatorError, ModulatorSettings, Modulus, ModulusRule};
 
 use super::checked::{Alternatives, Analysis, Identity, ModulatorPlan, Reference};
 use super::modulation::dither_value;
@@ -48,6 +48,13 @@ pub fn alternatives(reader: &mut Reader, section: &Section, own: Option<(&Refere
     let orders = orders(reader, section, settings);
     let dithers = dithers(reader, section, settings, orders.as_deref());
     let injections = frequencies(reader.quantities(section, "injections")).unwrap_or_default();
+    let output_dividers = reader.wholes(section, "output_dividers").map(|found| found.value).unwrap_or_default();
+    let seeds = reader.wholes(section, "seeds").map(|found| found.value).unwrap_or_default();
+    let moduli = moduli(reader, section, settings);
+    let offset_currents_a = reader
+        .quantities(section, "offset_currents")
+        .map(|found| found.value.iter().map(crate::base::Exact::to_f64).collect())
+        .unwrap_or_default();
     let nudge = reader.frequency(section, "nudge").map_or(Frequency::from_whole_hz(0), |found| found.value);
     let reference = own.map(|(reference, _)| reference);
     let modulator = own.map(|(_, modulator)| modulator);
@@ -58,8 +65,29 @@ pub fn alternatives(reader: &mut Reader, section: &Section, own: Option<(&Refere
         orders: orders.unwrap_or_else(|| modulator.map(|own| own.settings.order).into_iter().collect()),
         dithers: dithers.unwrap_or_else(|| modulator.map(|own| own.settings.dither).into_iter().collect()),
         injections,
+        output_dividers,
+        seeds,
+        moduli,
+        offset_currents_a,
         nudge,
     }
+}
+
+/// Fixed moduli that the plan's structure works with.
+fn moduli(reader: &mut Reader, section: &Section, own: Option<&ModulatorSettings>) -> Vec<Modulus> {
+    let Some(found) = reader.wholes(section, "moduli") else { return Vec::new() };
+    let mut moduli = Vec::new();
+    for number in found.value {
+        let checked = Modulus::new(number).and_then(|modulus| match own {
+            Some(own) => ModulusRule::Fixed(modulus).working(own.structure).map(|_| modulus),
+            None => Ok(modulus),
+        });
+        match checked {
+            Ok(modulus) => moduli.push(modulus),
+            Err(error) => reader.problem(&section.key("moduli"), &found.span, error.to_string()),
+        }
+    }
+    moduli
 }
 
 /// Orders that the plan's structure has.

@@ -5,7 +5,7 @@ use std::io::ErrorKind;
 use std::path::Path;
 
 use super::checked::Plan;
-use super::parse::parse_plan;
+use super::parse::{parse_dense_plan, parse_plan};
 use super::problem::{PlanFailure, PlanProblem};
 
 /// Text of the built-in demonstration plan.
@@ -16,6 +16,22 @@ const DEMO: &str = include_str!("../../configs/demo.toml");
 /// # Errors
 /// `Io` when the path cannot be opened or read, `Content` with every problem otherwise.
 pub fn read_plan_file(path: &Path) -> Result<Plan, PlanFailure> {
+    read_with(path, parse_plan)
+}
+
+/// Returns the checked plan of a file that may hold up to [`super::MOST_DENSE_CHANNELS`] channels: for uses that
+/// enumerate none.
+///
+/// # Errors
+/// As [`read_plan_file`].
+pub fn read_dense_plan_file(path: &Path) -> Result<Plan, PlanFailure> {
+    read_with(path, parse_dense_plan)
+}
+
+/// A reader of plan text: [`parse_plan`] or [`parse_dense_plan`].
+type Parse = fn(&str, &str, super::tables::Load) -> Result<Plan, Vec<PlanProblem>>;
+
+fn read_with(path: &Path, parse: Parse) -> Result<Plan, PlanFailure> {
     let text = read_text(path)?;
     let folder = path.parent().unwrap_or(Path::new("")).to_owned();
     let load = |name: &str| match read_text(&folder.join(name)) {
@@ -26,7 +42,7 @@ pub fn read_plan_file(path: &Path) -> Result<Plan, PlanFailure> {
         }
     };
     let stem = path.file_stem().map_or_else(|| "plan".to_owned(), |stem| stem.to_string_lossy().into_owned());
-    parse_plan(&text, &stem, &load).map_err(|problems| PlanFailure::Content {
+    parse(&text, &stem, &load).map_err(|problems| PlanFailure::Content {
         problems,
         source_name: path.display().to_string(),
         text,

@@ -244,6 +244,12 @@ pub const KEYS: &[Key] = &[
     key("alternatives", "dithers", Special("a list of dithers as in modulator.dither"), "dithers a remedy may use")
         .or("the plan's own"),
     key("alternatives", "injections", Quantities(Frequency, Any), "injections a remedy may use").or("the groups' own"),
+    key("alternatives", "output_dividers", Wholes(1, 1_000_000), "output dividers a remedy may use")
+        .or("the groups' own"),
+    key("alternatives", "seeds", Wholes(0, 1 << 48), "first seeds a remedy may use").or("the plan's own"),
+    key("alternatives", "moduli", Wholes(2, 1 << 48), "fixed moduli a remedy may use").or("the plan's own"),
+    key("alternatives", "offset_currents", Quantities(Current, Any), "offset currents a remedy may use")
+        .or("the plan's own"),
     key("alternatives", "nudge", Quantity(Frequency, NotNegative), "largest shift of the output a remedy may make")
         .or("0 Hz"),
     key("analysis", "record", Whole(1024, 1 << 25), "samples of a record, and the longest period transformed whole")

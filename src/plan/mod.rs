@@ -18,13 +18,13 @@ mod tables;
 
 pub use crate::loop_model::OscillatorNoise;
 pub use crate::tones::Mechanism;
-pub use channels::MOST_CHANNELS;
+pub use channels::{MOST_CHANNELS, MOST_DENSE_CHANNELS};
 pub use checked::{
     Alternatives, Analysis, Anchor, AnchorPlace, Boundary, ChannelGroup, ChannelList, Clock, Detector, Divider, Gain,
     Guard, Identity, Limits, LoopEdge, LoopPlan, Mask, MismatchPoints, ModulatorPlan, Oscillator, Plan, Reference,
 };
 pub use example::example_plan;
-pub use file::{demo_plan, read_plan_file};
-pub use parse::parse_plan;
+pub use file::{demo_plan, read_dense_plan_file, read_plan_file};
+pub use parse::{parse_dense_plan, parse_plan};
 pub use problem::{Colour, PlanFailure, PlanProblem, render_problems};
 pub use schema::json_schema;

@@ -6,7 +6,7 @@ use sha2::{Digest, Sha256};
 use toml::Spanned;
 use toml::de::{DeTable, DeValue};
 
-use super::channels::{MOST_CHANNELS, group};
+use super::channels::{MOST_CHANNELS, MOST_DENSE_CHANNELS, group};
 use super::checked::{Limits, MismatchPoints, Plan};
 use super::choices::{alternatives, analysis, identity};
 use super::hardware::{detector, divider, loop_filter, oscillator, reference};
@@ -29,7 +29,19 @@ use super::tables::Load;
 /// assert_eq!(plan.stem, "example");
 /// ```
 pub fn parse_plan(text: &str, stem: &str, load: Load) -> Result<Plan, Vec<PlanProblem>> {
-    let mut reader = Reader::new(text);
+    parse_up_to(MOST_CHANNELS, text, stem, load)
+}
+
+/// Returns the checked plan of a text that may hold up to [`MOST_DENSE_CHANNELS`] channels: for uses that enumerate none.
+///
+/// # Errors
+/// As [`parse_plan`].
+pub fn parse_dense_plan(text: &str, stem: &str, load: Load) -> Result<Plan, Vec<PlanProblem>> {
+    parse_up_to(MOST_DENSE_CHANNELS, text, stem, load)
+}
+
+fn parse_up_to(most_channels: u64, text: &str, stem: &str, load: Load) -> Result<Plan, Vec<PlanProblem>> {
+    let mut reader = Reader::new(text, most_channels);
     let (root, errors) = DeTable::parse_recoverable(text);
     for error in &errors {
         let span = error.span().unwrap_or(0..0);
@@ -97,8 +109,8 @@ fn read(reader: &mut Reader, root: &DeTable, text: &str, stem: &str, load: Load)
     let groups = groups.into_iter().collect::<Option<Vec<_>>>();
     if let Some(groups) = &groups {
         let channels: u64 = groups.iter().map(|group| group.channels.len()).sum();
-        if channels > MOST_CHANNELS {
-            let text = format!("the plan has {channels} channels, at most {MOST_CHANNELS} are allowed");
+        if channels > reader.most_channels {
+            let text = format!("the plan has {channels} channels, at most {} are allowed", reader.most_channels);
             reader.problem("channels", &(0..0), text);
         }
         same_names(reader, groups, root);

@@ -47,6 +47,8 @@ pub struct Reader<'t> {
     pub basis: BTreeMap<String, Basis>,
     /// Doubts.
     pub warnings: Vec<String>,
+    /// Channels that the plan may hold.
+    pub most_channels: u64,
 }
 
 /// Sections that state what is wanted, not what the hardware is: their given values are no assumptions.
@@ -55,9 +57,10 @@ const REQUIREMENTS: [&str; 5] = ["plan", "limits", "channels", "alternatives", "
 impl<'t> Reader<'t> {
     /// Returns a reader over a plan text.
     #[must_use]
-    pub fn new(text: &'t str) -> Self {
+    pub fn new(text: &'t str, most_channels: u64) -> Self {
         Self {
             text,
+            most_channels,
             problems: Vec::new(),
             given: Vec::new(),
             defaults: Vec::new(),

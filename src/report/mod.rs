@@ -12,6 +12,8 @@ mod page;
 mod page_rows;
 mod paint;
 mod plots;
+mod positions;
+mod remedy;
 mod survey_json;
 mod svg_backend;
 mod write;
@@ -22,6 +24,8 @@ pub use comparison::{comparison_files, comparison_json, comparison_text};
 pub use error::ReportError;
 pub use identification::{identification_json, identification_text};
 pub use json::json_text;
+pub use positions::{hunt_json, hunt_text, intervals_json, intervals_text};
+pub use remedy::{remedy_files, remedy_json, remedy_text};
 pub use survey_json::survey_json;
 pub use write::{add_files, check_target, write_set};
 

@@ -10,6 +10,7 @@ mod loops;
 mod modulators;
 mod outside;
 mod plans;
+mod remedies;
 mod reports;
 mod spectra;
 mod surveys;
