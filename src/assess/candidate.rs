@@ -204,6 +204,7 @@ pub fn to_tone(candidate: Candidate, position: Position) -> Tone {
         inside_guard: position.inside_guard,
         after_loop: candidate.after_loop,
         residue: candidate.residue,
+        victims: Vec::new(),
         unknown,
         label: candidate.label,
     }

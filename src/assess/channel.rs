@@ -3,7 +3,7 @@
 use crate::base::{Basis, Exact, Frequency};
 use crate::loop_model::{ChargeCurve, ChargeTerms, LoopResponse, reference_tone_dbc, static_charge_cycles};
 use crate::modulator::period;
-use crate::plan::{ChannelGroup, Guard, LoopEdge, MismatchPoints, Plan};
+use crate::plan::{ChannelGroup, MismatchPoints, Plan};
 use crate::spectrum::{divided_dbc, sideband_dbc};
 use crate::tones::{Charge, FamilyTone, modulator_family, nearest_fraction};
 
@@ -17,7 +17,10 @@ use super::noise::{ChannelNoise, channel_noise};
 use super::placement::{Placement, place};
 use super::result::{BoundaryNear, ChannelResult, Method, Origin, Tone};
 use super::setup::{AssessError, Setup, gain_at, interpolate, transfer_of};
+use super::tolerance::{Tolerances, within};
 use super::verdict::{Evidence, MaskState, judge};
+use super::victims::{hit, limit_dbc};
+use super::zone::Zone;
 
 /// Parts below this level have no meaning in double precision and are taken as absent \[dBc\].
 const NO_LEVEL_DBC: f64 = -200.0;
@@ -61,7 +64,7 @@ impl Setup<'_> {
         if placement.illegal.is_empty() {
             Legal { setup: self, group: settings, channel, placement: &placement }.fill(&mut result, scratch)?;
         }
-        let (verdict, reasons) = judge(&Evidence {
+        let evidence = Evidence {
             illegal: &result.illegal,
             word: Some((placement.word.k, placement.word.modulus.get())),
             tones: &result.tones,
@@ -71,9 +74,20 @@ impl Setup<'_> {
             phase_limit_deg: settings.limits.phase_error_deg.filter(|_| result.legal),
             phase_error_deg: result.phase_error_with_tones_deg,
             phase_error_known_deg: result.phase_error_known_deg,
-        });
+        };
+        let (verdict, reasons) = judge(&evidence);
+        let range = Tolerances::of(plan).and_then(|tolerances| within(&evidence, &tolerances, &result));
         result.verdict = verdict;
         result.reasons = reasons;
+        if let Some((best, worst)) = range.filter(|(best, worst)| best != worst) {
+            result.warnings.push(format!(
+                "within the stated tolerances the verdict ranges from {} to {}",
+                best.word(),
+                worst.word()
+            ));
+        }
+        result.verdict_best = range.map(|(best, _)| best);
+        result.verdict_worst = range.map(|(_, worst)| worst);
         Ok(result)
     }
 }
@@ -141,20 +155,11 @@ fn identity(
         residual_fm_hz: None,
         evm_percent: None,
         verdict: super::result::Verdict::Clear,
+        verdict_best: None,
+        verdict_worst: None,
         reasons: Vec::new(),
         warnings: Vec::new(),
     }
-}
-
-/// Returns the loop edge of a response \[Hz\]; `None` where it has none.
-#[must_use]
-pub fn edge_of(edge: LoopEdge, response: &LoopResponse) -> Option<f64> {
-    match edge {
-        LoopEdge::UnityGain => response.unity_gain_hz(),
-        LoopEdge::ThreeDb => response.closed_loop_3db_hz(),
-    }
-    // A measured response has no unity-gain frequency: its 3 dB frequency stands in, as the outputs say.
-    .or(response.closed_loop_3db_hz())
 }
 
 /// A channel with a legal word, on its way through the stages.
@@ -180,7 +185,7 @@ impl Legal<'_> {
             .setup
             .response(self.placement)
             .map_err(|source| AssessError::Loop { place: format!("channel {}", self.channel), source })?;
-        let zone = self.zone(&response);
+        let zone = Zone::of(self.plan(), self.setup.pfd(), &response);
         result.unity_gain_hz = response.unity_gain_hz();
         result.phase_margin_deg = response.phase_margin_deg();
         result.closed_loop_3db_hz = response.closed_loop_3db_hz();
@@ -203,18 +208,6 @@ impl Legal<'_> {
         );
         fill_noise(result, &noise, self.placement);
         Ok(())
-    }
-
-    /// Returns guard and loop edge of the channel.
-    fn zone(&self, response: &LoopResponse) -> Zone {
-        let boundary = &self.plan().boundary;
-        let edge_hz = edge_of(boundary.edge, response);
-        let guard = match boundary.guard {
-            Guard::LoopEdge => None,
-            Guard::Offset(offset) => Some(offset),
-            Guard::ShareOfPfd(share) => share.times(&self.setup.pfd().hz()).ok().map(Frequency::from_hz),
-        };
-        Zone { edge_hz, guard }
     }
 
     /// Lists the boundaries within guard or edge, and the nearest of the comparison family.
@@ -485,10 +478,11 @@ impl Legal<'_> {
             let position = Position {
                 inside_guard: zone.in_guard(candidate.offset),
                 inside_loop: zone.in_loop(candidate.offset),
-                limit_dbc: self.group.limits.spur.as_ref().map(|mask| mask.limit_dbc(offset_hz)),
+                limit_dbc: limit_dbc(self.plan(), self.group, result.output_hz, offset_hz),
             };
             let is_present = candidate.is_present();
-            let tone: Tone = to_tone(candidate, position);
+            let mut tone: Tone = to_tone(candidate, position);
+            tone.victims = hit(self.plan(), result.output_hz, offset_hz).map(|victim| victim.name.clone()).collect();
             if !is_present || tone.level_dbc.is_some_and(|level| level < floor) {
                 result.tones_below_floor += 1;
                 continue;
@@ -516,30 +510,4 @@ fn fill_noise(result: &mut ChannelResult, noise: &ChannelNoise, placement: &Plac
     result.residual_fm_hz = noise.total_with_tones.map(|figures| figures.residual_fm_hz());
     result.evm_percent = noise.total_with_tones.map(|figures| figures.evm_percent());
     result.noise_unknown.clone_from(&noise.unknown);
-}
-
-/// Guard and loop edge of one channel, both inclusive.
-#[derive(Debug, Clone, Copy)]
-struct Zone {
-    /// Loop edge \[Hz\]; `None` where the response has none.
-    edge_hz: Option<f64>,
-    /// Exact guard; `None` is the loop edge.
-    guard: Option<Frequency>,
-}
-
-impl Zone {
-    fn guard_hz(&self) -> Option<f64> {
-        self.guard.map(|guard| guard.to_f64_hz()).or(self.edge_hz)
-    }
-
-    fn in_guard(&self, offset: Frequency) -> bool {
-        match self.guard {
-            Some(guard) => offset <= guard,
-            None => self.in_loop(offset),
-        }
-    }
-
-    fn in_loop(&self, offset: Frequency) -> bool {
-        self.edge_hz.is_some_and(|edge| offset.to_f64_hz() <= edge)
-    }
 }

@@ -223,7 +223,7 @@ pub struct Tone {
     pub q: Option<u64>,
     /// The parts.
     pub contributions: Contributions,
-    /// The mask at the offset \[dBc\]; `None` without a mask.
+    /// The mask at the offset, or the limit of a victim where that is stricter \[dBc\]; `None` where none applies.
     pub limit_dbc: Option<f64>,
     /// limit − level (known part when the level is unknown) \[dB\]; positive passes.
     pub margin_db: Option<f64>,
@@ -238,6 +238,8 @@ pub struct Tone {
     /// `h·K mod± M`, signed, for tones of the modulator family.
     #[serde(skip)]
     pub residue: Option<i64>,
+    /// Names of the plan's victims that it hits.
+    pub victims: Vec<String>,
     /// Names of the applicable parts that are unknown (`coupling`, `nonlinearity`, …), each with its reason.
     pub unknown: Vec<String>,
 }
@@ -314,6 +316,8 @@ pub struct ChannelResult {
     pub residual_fm_hz: Option<f64>,
     pub evm_percent: Option<f64>,
     pub verdict: Verdict,
+    pub verdict_best: Option<Verdict>,
+    pub verdict_worst: Option<Verdict>,
     pub reasons: Vec<Reason>,
     pub warnings: Vec<String>,
 }

@@ -111,15 +111,19 @@ fn judge_tone(evidence: &Evidence, tone: &Tone) -> Option<Reason> {
         residue: tone.residue,
         offset_hz: Some(tone.offset_hz),
     };
-    let place = format!("{} at {}", tone.label, hertz(tone.offset_hz));
+    let hits = match tone.victims.as_slice() {
+        [] => String::new(),
+        victims => format!(" (hits {})", victims.join(", ")),
+    };
+    let place = format!("{} at {}{hits}", tone.label, hertz(tone.offset_hz));
     let of_modulator = matches!(tone.origin, Origin::Boundary | Origin::Fractional);
-    let above = match (evidence.mask, tone.known_level_dbc) {
-        (_, None) => None,
-        (MaskState::Given, Some(level)) => tone.margin_db.filter(|margin| *margin < 0.0).map(|margin| {
+    let above = match (tone.known_level_dbc, tone.margin_db) {
+        (None, _) => None,
+        (Some(level), Some(margin)) if margin < 0.0 => {
             let part = if tone.level_dbc.is_some() { "" } else { " (known part alone)" };
-            format!("{place}: {level:.1} dBc{part}, {:.1} dB above its limit", -margin)
-        }),
-        (MaskState::Absent, Some(level)) => (tone.inside_loop && of_modulator)
+            Some(format!("{place}: {level:.1} dBc{part}, {:.1} dB above its limit", -margin))
+        }
+        (Some(level), _) => (evidence.mask == MaskState::Absent && tone.inside_loop && of_modulator)
             .then(|| format!("{place}: {level:.1} dBc inside the loop, where no mask allows a tone")),
     };
     if let Some(text) = above {

@@ -33,6 +33,8 @@ pub struct Plan {
     pub anchors: Vec<Anchor>,
     /// Other clocks on the board.
     pub clocks: Vec<Clock>,
+    /// Who must not be hit.
+    pub victims: Vec<Victim>,
     /// What the plan must meet.
     pub limits: Limits,
     /// Channel groups, in file order.
@@ -298,6 +300,21 @@ pub struct Clock {
     pub anchor: Option<Anchor>,
 }
 
+/// A receiver, channel or band that tones may hit; offsets or a band, at least one.
+#[derive(Debug, Clone, PartialEq, Serialize)]
+pub struct Victim {
+    /// Name.
+    pub name: String,
+    /// Offsets from the carrier, either side, inclusive \[Hz\].
+    pub offsets_hz: Option<(f64, f64)>,
+    /// Output frequencies, inclusive \[Hz\].
+    pub band_hz: Option<(f64, f64)>,
+    /// Bandwidth of the victim \[Hz\].
+    pub width_hz: f64,
+    /// Limit at the output \[dBc\]; `None`: the mask alone.
+    pub limit_dbc: Option<f64>,
+}
+
 /// A limit over offset: dB linear in log offset, end values held.
 #[derive(Debug, Clone, PartialEq, Serialize)]
 pub struct Mask {
@@ -437,4 +454,6 @@ pub struct Analysis {
     pub span_hz: f64,
     /// Known tones below this level are dropped and counted \[dBc\].
     pub tone_floor_dbc: f64,
+    /// How far levels may be off, half width \[dB\]; 0: none stated.
+    pub level_uncertainty_db: f64,
 }

@@ -33,7 +33,8 @@ pub fn analysis(reader: &mut Reader, section: &Section, pfd_hz: Option<f64>) -> 
     let default_span = DEFAULT_SPAN_HZ.min(pfd_hz.map_or(f64::INFINITY, |pfd| pfd / 2.0));
     let span_hz = reader.real(section, "span").unwrap_or(default_span);
     let tone_floor_dbc = reader.real(section, "tone_floor").unwrap_or(DEFAULT_TONE_FLOOR_DBC);
-    Analysis { record, span_hz, tone_floor_dbc }
+    let level_uncertainty_db = reader.real(section, "level_uncertainty").unwrap_or(0.0);
+    Analysis { record, span_hz, tone_floor_dbc, level_uncertainty_db }
 }
 
 /// Reads `[alternatives]`; what is absent is the plan's own value.

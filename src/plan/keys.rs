@@ -219,6 +219,18 @@ pub const KEYS: &[Key] = &[
     key("clock", "name", Text, "name of the clock").required(),
     key("clock", "frequency", Quantity(Frequency, Positive), "frequency of the clock").required(),
     key("clock", "anchor", Table("anchor"), "known level of its tone").or("unknown level"),
+    key("victim", "name", Text, "who is hit, as the reports shall say").required(),
+    key("victim", "offsets", Range(Frequency), "offsets from the carrier, either side, inclusive"),
+    key("victim", "band", Range(Frequency), "output frequencies, instead of offsets, inclusive"),
+    key(
+        "victim",
+        "width",
+        Quantity(Frequency, NotNegative),
+        "bandwidth of the victim: tones within half of it beyond the range hit as well",
+    )
+    .or("0 Hz"),
+    key("victim", "limit", Quantity(Level, Any), "its limit at the output; the stricter of it and the mask holds")
+        .or("the mask alone"),
     key("limits", "spur", Pairs(Frequency, Level), "spur mask at the output, offsets rising")
         .or("none: position alone decides"),
     key("limits", "margin", Quantity(LevelDifference, NotNegative), "margin below a limit that is still marginal")
@@ -257,6 +269,13 @@ pub const KEYS: &[Key] = &[
     key("analysis", "span", Quantity(Frequency, Positive), "largest tone offset listed")
         .or("the smaller of 10 MHz and half the PFD frequency"),
     key("analysis", "tone_floor", Quantity(Level, Any), "known tones below it are dropped and counted").or("-120 dBc"),
+    key(
+        "analysis",
+        "level_uncertainty",
+        Quantity(LevelDifference, NotNegative),
+        "how far levels may be off, half width",
+    )
+    .or("0 dB: none stated"),
 ];
 
 /// Sections with one table, in the order of the starter plan, and whether the plan must hold them.
@@ -275,7 +294,7 @@ pub const SECTIONS: &[(&str, bool)] = &[
 ];
 
 /// Sections that may stand several times, `[[name]]`, and whether the plan must hold one.
-pub const LISTS: &[(&str, bool)] = &[("anchor", false), ("clock", false), ("channels", true)];
+pub const LISTS: &[(&str, bool)] = &[("anchor", false), ("clock", false), ("victim", false), ("channels", true)];
 
 /// Returns the keys of a section.
 pub fn keys_of(section: &str) -> impl Iterator<Item = &'static Key> {

@@ -22,6 +22,7 @@ pub use channels::{MOST_CHANNELS, MOST_DENSE_CHANNELS};
 pub use checked::{
     Alternatives, Analysis, Anchor, AnchorPlace, Boundary, ChannelGroup, ChannelList, Clock, Detector, Divider, Gain,
     Guard, Identity, Limits, LoopEdge, LoopPlan, Mask, MismatchPoints, ModulatorPlan, Oscillator, Plan, Reference,
+    Victim,
 };
 pub use example::example_plan;
 pub use file::{demo_plan, read_dense_plan_file, read_plan_file};

@@ -14,7 +14,7 @@ use super::keys::{LISTS, SECTIONS};
 use super::modulation::modulator;
 use super::problem::PlanProblem;
 use super::reader::{Reader, Section, describe, did_you_mean};
-use super::spurs::{anchor, boundary, clock, limits};
+use super::spurs::{anchor, boundary, clock, limits, victim};
 use super::tables::Load;
 
 /// Returns the checked plan of a text; `stem` names it where it has no title; `load` reads files beside it.
@@ -93,6 +93,7 @@ fn read(reader: &mut Reader, root: &DeTable, text: &str, stem: &str, load: Load)
     let boundary = boundary(reader, &found, edge);
     let first_output = divider.output.first().copied().unwrap_or(1);
     let anchors: Vec<_> = many(reader, root, "anchor").iter().map(|s| anchor(reader, s, first_output)).collect();
+    let victims: Vec<_> = many(reader, root, "victim").iter().map(|s| victim(reader, s)).collect();
     let clocks: Vec<_> = many(reader, root, "clock").iter().map(|s| clock(reader, s, first_output)).collect();
     let pfd_hz = reference.as_ref().and_then(|reference| reference.pfd().ok()).map(|pfd| pfd.to_f64_hz());
     let found = section(reader, "limits");
@@ -128,6 +129,7 @@ fn read(reader: &mut Reader, root: &DeTable, text: &str, stem: &str, load: Load)
         loop_plan,
         boundary,
         anchors: anchors.into_iter().collect::<Option<Vec<_>>>()?,
+        victims: victims.into_iter().collect::<Option<Vec<_>>>()?,
         clocks: clocks.into_iter().collect::<Option<Vec<_>>>()?,
         limits,
         groups: groups?,

@@ -1,10 +1,10 @@
-//! Boundary, anchors, clocks and limits.
+//! Boundary, anchors, clocks, victims and limits.
 
 use crate::base::{Dimension, Exact, Frequency, parse_quantity};
 use crate::tones::Mechanism;
 
-use super::checked::{Anchor, AnchorPlace, Boundary, Clock, Guard, Limits, LoopEdge, Mask};
-use super::reader::{Reader, Section, describe};
+use super::checked::{Anchor, AnchorPlace, Boundary, Clock, Guard, Limits, LoopEdge, Mask, Victim};
+use super::reader::{Located, Reader, Section, describe};
 
 /// Margin when the plan gives none \[dB\].
 const DEFAULT_MARGIN_DB: f64 = 6.0;
@@ -122,6 +122,20 @@ pub fn clock(reader: &mut Reader, section: &Section, first_output_divider: u64) 
         }
     };
     Some(Clock { name: name?.value, frequency: frequency?.value, anchor })
+}
+
+/// Reads one `[[victim]]`.
+pub fn victim(reader: &mut Reader, section: &Section) -> Option<Victim> {
+    let name = reader.text(section, "name");
+    let to_hz = |found: Located<(Exact, Exact)>| (found.value.0.to_f64(), found.value.1.to_f64());
+    let offsets_hz = reader.range(section, "offsets").map(to_hz);
+    let band_hz = reader.range(section, "band").map(to_hz);
+    if section.value("offsets").is_some() == section.value("band").is_some() {
+        reader.problem(&section.path, &section.head(), "give offsets or band, one of them");
+    }
+    let width_hz = reader.real(section, "width").unwrap_or(0.0);
+    let limit_dbc = reader.real(section, "limit");
+    Some(Victim { name: name?.value, offsets_hz, band_hz, width_hz, limit_dbc })
 }
 
 /// Reads `[limits]`, or the limits of a group, whose missing keys are the plan's.

@@ -125,6 +125,7 @@ columns! {
     "worst_known_level_dbc" => |c| worst(c, |t| figure(t.known_level_dbc));
     "worst_limit_dbc" => |c| worst(c, |t| figure(t.limit_dbc));
     "worst_margin_db" => |c| worst(c, |t| figure(t.margin_db));
+    "worst_victims" => |c| worst(c, |t| joined(&t.victims, String::clone, "; "));
     "worst_basis" => |c| worst(c, |t| text(t.basis.word()));
     "tones" => |c| integer(Some(c.tones.len()));
     "unknown_tones" => |c| integer(Some(c.unknown_tones));
@@ -138,6 +139,8 @@ columns! {
     "residual_fm_hz" => |c| figure(c.residual_fm_hz);
     "evm_percent" => |c| figure(c.evm_percent);
     "verdict" => |c| text(c.verdict.word());
+    "verdict_best" => |c| c.verdict_best.map_or(Cell::Empty, |verdict| text(verdict.word()));
+    "verdict_worst" => |c| c.verdict_worst.map_or(Cell::Empty, |verdict| text(verdict.word()));
     "rules" => |c| joined(rules_fired(c), |(rule, _)| rule.name().to_owned(), " ");
     "reasons" => |c| joined(&c.reasons, |reason| reason.text.clone(), "; ");
     "warnings" => |c| joined(&c.warnings, String::clone, "; ");

@@ -3,7 +3,7 @@
 use askama::Template;
 use serde_json::{Value, json};
 
-use super::columns::{inert, word};
+use super::columns::inert;
 use super::json::json_text;
 use super::page::policy;
 use super::{ReportError, ReportFile};
@@ -27,16 +27,6 @@ pub(super) fn criterion(criterion: Criterion) -> &'static str {
     }
 }
 
-/// Returns the tone that decides: the one with the smallest margin, else the first of unknown level inside the guard.
-fn deciding(channel: &ChannelResult) -> Option<&Tone> {
-    channel
-        .tones
-        .iter()
-        .filter(|tone| tone.margin_db.is_some())
-        .min_by(|a, b| a.margin_db.unwrap_or(f64::INFINITY).total_cmp(&b.margin_db.unwrap_or(f64::INFINITY)))
-        .or_else(|| channel.tones.iter().find(|tone| tone.level_dbc.is_none() && tone.inside_guard))
-}
-
 fn tone_words(tone: &Tone) -> String {
     let level = tone.known_level_dbc.map_or_else(|| "unknown level".to_owned(), |level| format!("{level:.1} dBc"));
     let margin = tone.margin_db.map_or_else(String::new, |margin| format!(", margin {margin:.1} dB"));
@@ -54,7 +44,7 @@ fn proof(cure: &Cure) -> String {
         Some(near) => parts.push(format!("nearest p/q {}/{} at {:.3} kHz", near.p, near.q, near.tone_offset_hz / 1e3)),
         None => parts.push("exact integer: no boundary tone".to_owned()),
     }
-    if let Some(tone) = deciding(after) {
+    if let Some(tone) = after.worst_tone() {
         parts.push(tone_words(tone));
     }
     parts.join("; ")
@@ -168,7 +158,7 @@ pub fn remedy_text(plan: &Plan, remedy: &Remedy) -> String {
     text.push_str(&format!("costs: {} (--cost changes them)\n", costs.join(", ")));
     for channel in &remedy.channels {
         let before = &channel.before;
-        let verdict = word(&before.verdict);
+        let verdict = before.verdict.word();
         text.push_str(&format!("\n{} {} is {verdict}: {}\n", before.group, before.channel, reasons(before)));
         if channel.cures.is_empty() {
             text.push_str("  no cure within the alternatives\n");
@@ -177,7 +167,7 @@ pub fn remedy_text(plan: &Plan, remedy: &Remedy) -> String {
             text.push_str(&format!(
                 "  {} -> {} (cost {})\n    proof: {}\n    price: {}\n",
                 cure.words(),
-                word(&cure.after.verdict),
+                cure.after.verdict.word(),
                 cure.cost,
                 proof(cure),
                 price(cure)
@@ -212,7 +202,7 @@ fn cure_value(cure: &Cure) -> Value {
         "output_divider": after.output_divider,
         "achieved_hz": after.achieved_hz,
         "boundary": after.boundary,
-        "deciding_tone": deciding(after),
+        "worst_tone": after.worst_tone(),
         "reasons": after.reasons,
         "noise_change_db": cure.noise_change_db,
         "reference_tone_dbc": cure.reference_tone_dbc,
@@ -279,7 +269,7 @@ fn remedy_csv(remedy: &Remedy) -> Result<Vec<u8>, ReportError> {
     let figure = |value: Option<f64>| value.map_or_else(String::new, |value| format!("{value:.3}"));
     for channel in &remedy.channels {
         let before = &channel.before;
-        let head = [inert(before.group.clone()), before.channel.to_string(), word(&before.verdict)];
+        let head = [inert(before.group.clone()), before.channel.to_string(), before.verdict.word().to_owned()];
         if channel.cures.is_empty() {
             writer.write_record(head.iter().cloned().chain(vec![String::new(); 14]))?;
         }
@@ -288,7 +278,7 @@ fn remedy_csv(remedy: &Remedy) -> Result<Vec<u8>, ReportError> {
             let rest = [
                 cure.words(),
                 cure.cost.to_string(),
-                word(&after.verdict),
+                after.verdict.word().to_owned(),
                 whole(after.n.map(|n| n.to_string())),
                 whole(after.k.map(|k| k.to_string())),
                 whole(after.m.map(|m| m.to_string())),
@@ -296,7 +286,7 @@ fn remedy_csv(remedy: &Remedy) -> Result<Vec<u8>, ReportError> {
                 after.doubler.to_string(),
                 after.reference_divider.to_string(),
                 whole(after.output_divider.map(|p| p.to_string())),
-                figure(deciding(after).and_then(|tone| tone.margin_db)),
+                figure(after.worst_tone().and_then(|tone| tone.margin_db)),
                 figure(cure.noise_change_db),
                 figure(after.error_hz),
                 cure.retune.to_string(),
@@ -310,7 +300,7 @@ fn remedy_csv(remedy: &Remedy) -> Result<Vec<u8>, ReportError> {
 /// One channel on the page.
 struct Patient {
     name: String,
-    verdict: String,
+    verdict: &'static str,
     reasons: String,
     cures: Vec<[String; 5]>,
     more: usize,
@@ -338,14 +328,14 @@ struct Page<'a> {
 fn patient(channel: &ChannelCures) -> Patient {
     Patient {
         name: format!("{} {}", channel.before.group, channel.before.channel),
-        verdict: word(&channel.before.verdict),
+        verdict: channel.before.verdict.word(),
         reasons: reasons(&channel.before),
         cures: channel
             .cures
             .iter()
             .take(SHOWN_CURES)
             .map(|cure| {
-                let verdict = word(&cure.after.verdict);
+                let verdict = cure.after.verdict.word().to_owned();
                 [cure.words(), cure.cost.to_string(), verdict, proof(cure), price(cure)]
             })
             .collect(),

@@ -16,3 +16,4 @@ mod spectra;
 mod surveys;
 mod tree;
 mod verdicts;
+mod victims;

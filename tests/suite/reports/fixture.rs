@@ -145,6 +145,7 @@ pub fn plan(count: u64) -> Plan {
         },
         anchors: vec![anchor],
         clocks: vec![Clock { name: "processor".into(), frequency: whole(48_000_000), anchor: None }],
+        victims: Vec::new(),
         limits: limits(),
         groups: groups(count),
         alternatives: Alternatives {
@@ -160,7 +161,7 @@ pub fn plan(count: u64) -> Plan {
             offset_currents_a: Vec::new(),
             nudge: whole(0),
         },
-        analysis: Analysis { record: 131_072, span_hz: 9.6e6, tone_floor_dbc: -120.0 },
+        analysis: Analysis { record: 131_072, span_hz: 9.6e6, tone_floor_dbc: -120.0, level_uncertainty_db: 0.0 },
         assumptions: Vec::new(),
         basis: BTreeMap::new(),
         warnings: Vec::new(),
@@ -202,6 +203,7 @@ fn coupled(harmonic: u64, offset_hz: f64, mask: &Limits, known: bool, dice: &mut
         inside_guard: offset_hz <= 1e5,
         after_loop: false,
         residue: None,
+        victims: Vec::new(),
         unknown: if known { Vec::new() } else { vec![format!("coupling: no anchor for q = {harmonic}")] },
     }
 }
@@ -226,6 +228,7 @@ fn bare(origin: Origin, label: &str, offset_hz: f64, level_dbc: Option<f64>, mas
         inside_guard: offset_hz <= 1e5,
         after_loop: false,
         residue: None,
+        victims: Vec::new(),
         unknown: if level_dbc.is_none() { vec!["leakage: not given".into()] } else { Vec::new() },
     }
 }
@@ -355,6 +358,8 @@ fn channel(group_index: usize, group: &ChannelGroup, index: u64, dice: &mut Dice
         residual_fm_hz: Some(41.5),
         evm_percent: None,
         verdict,
+        verdict_best: None,
+        verdict_worst: None,
         reasons,
         warnings: Vec::new(),
     }
