@@ -96,6 +96,9 @@ pub struct SurveyArguments {
     /// Folder for the report set; absent, empty or an earlier report set [default: reports/<plan stem>]
     #[arg(long, value_name = "DIR", value_hint = ValueHint::DirPath)]
     pub out: Option<PathBuf>,
+    /// Another plan on the same board; may stand several times: beats.csv and beats.json tell where their channels beat
+    #[arg(long, value_name = "PLAN", value_hint = ValueHint::FilePath)]
+    pub beside: Vec<PathBuf>,
     /// Channels written in full [default: all up to 20,000 channels, flagged beyond]
     #[arg(long)]
     pub detail: Option<DetailChoice>,

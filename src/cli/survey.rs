@@ -4,8 +4,10 @@ use std::path::{Path, PathBuf};
 
 use crate::assess::AssessError;
 use crate::plan::{Plan, demo_plan};
-use crate::report::{Detail, RenderOptions, ReportError, check_target, render, survey_json, write_set};
-use crate::survey::{SurveyResult, survey};
+use crate::report::{
+    Detail, RenderOptions, ReportError, add_files, beat_files, beats_text, check_target, render, survey_json, write_set,
+};
+use crate::survey::{SurveyResult, beats, survey};
 
 use super::arguments::{DetailChoice, FailOn, SurveyArguments};
 use super::failure::Failure;
@@ -26,6 +28,7 @@ pub fn run(arguments: &SurveyArguments) -> Result<(), Failure> {
         Some(path) => plan_file::read(path)?,
         None => demo_plan(),
     };
+    let neighbours = arguments.beside.iter().map(|path| plan_file::read(path)).collect::<Result<Vec<Plan>, _>>()?;
     let out = arguments.out.clone().unwrap_or_else(|| PathBuf::from("reports").join(&plan.stem));
     check_target(&out).map_err(report_failure)?;
     let channels: u64 = plan.groups.iter().map(|group| group.channels.len()).sum();
@@ -42,6 +45,12 @@ pub fn run(arguments: &SurveyArguments) -> Result<(), Failure> {
     let options = RenderOptions { detail };
     let set = render(&result, &options).map_err(report_failure)?;
     write_set(&out, &set).map_err(report_failure)?;
+    if !neighbours.is_empty() {
+        let found = in_pool(arguments.common.jobs, || beats(&result.channels, &plan, &neighbours))?
+            .map_err(|error| assess_failure(&plan, &error))?;
+        add_files(&out, &beat_files(&plan, &found).map_err(report_failure)?).map_err(report_failure)?;
+        voice.say(beats_text(&found).trim_end());
+    }
     for warning in &result.warnings {
         voice.say(&format!("warning: {warning}"));
     }

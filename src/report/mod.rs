@@ -1,5 +1,6 @@
 //! The report set: pure bytes from one survey result, and the one place that writes them to a folder.
 
+mod beats;
 mod channel;
 mod columns;
 mod comparison;
@@ -18,6 +19,7 @@ mod survey_json;
 mod svg_backend;
 mod write;
 
+pub use beats::{beat_files, beats_text};
 pub use channel::{channel_json, channel_text};
 pub use columns::{COLUMNS, Cell, Column, channels_csv};
 pub use comparison::{comparison_files, comparison_json, comparison_text};

@@ -1,10 +1,12 @@
 //! All channels in parallel, the summary, and the run's own check of its fast path.
 
+mod beats;
 mod method_check;
 mod result;
 mod run;
 mod spectrum_view;
 
 pub use crate::assess::SpectrumView;
+pub use beats::{Beat, Node, beats};
 pub use result::{LoopSummary, MethodCheck, Range3, Summary, SurveyResult};
 pub use run::{summarise, survey};
