@@ -104,65 +104,6 @@ impl FilterComponents {
     }
 }
 
-/// A second-order filter given by what the loop shall do.
-#[derive(Debug, Clone, Copy, PartialEq, Serialize)]
-pub struct FilterDesign {
-    /// Open-loop unity-gain frequency at the design divider.
-    pub bandwidth_hz: f64,
-    /// Phase margin at the design divider, 0 < margin < 90.
-    pub phase_margin_deg: f64,
-    /// N + K/M of the design; `None` is the geometric mean of the smallest and largest legal one.
-    pub design_divider: Option<f64>,
-}
-
-impl FilterDesign {
-    /// Returns the second-order filter that gives this bandwidth and margin at a divider ratio.
-    ///
-    /// `T1 = (sec PM − tan PM)/ω_c`, `T2 = 1/(ω_c²·T1)`,
-    /// `C = I_cp·K_vco/(N·ω_c²)·sqrt((1 + ω_c²T2²)/(1 + ω_c²T1²))`, `C1 = C·T1/T2`, `C2 = C − C1`, `R2 = T2/C2`,
-    /// K_vco in Hz/V (Keese 1996).
-    ///
-    /// # Errors
-    /// `NotPositive`, `PhaseMargin`.
-    ///
-    /// # Examples
-    /// ```
-    /// use thornmap::loop_model::FilterDesign;
-    /// let design = FilterDesign { bandwidth_hz: 20e3, phase_margin_deg: 45.0, design_divider: None };
-    /// let filter = design.components(5e-3, 20e6, 4500.0).unwrap();
-    /// assert!((filter.r2_ohm - 6826.03).abs() < 0.07);
-    /// ```
-    pub fn components(
-        &self,
-        current_a: f64,
-        gain_hz_per_v: f64,
-        divider: f64,
-    ) -> Result<FilterComponents, LoopModelError> {
-        for (what, found) in [
-            ("the loop bandwidth", self.bandwidth_hz),
-            ("the pump current", current_a),
-            ("the tuning gain", gain_hz_per_v),
-            ("the design divider", divider),
-        ] {
-            if !(found.is_finite() && found > 0.0) {
-                return Err(LoopModelError::NotPositive { what, found });
-            }
-        }
-        if !(self.phase_margin_deg > 0.0 && self.phase_margin_deg < 90.0) {
-            return Err(LoopModelError::PhaseMargin { found_deg: self.phase_margin_deg });
-        }
-        let corner_rad = std::f64::consts::TAU * self.bandwidth_hz;
-        let margin = self.phase_margin_deg.to_radians();
-        let pole_s = (margin.cos().recip() - margin.tan()) / corner_rad;
-        let zero_s = (corner_rad * corner_rad * pole_s).recip();
-        let shape = (1.0 + (corner_rad * zero_s).powi(2)) / (1.0 + (corner_rad * pole_s).powi(2));
-        let total = current_a * gain_hz_per_v / (divider * corner_rad * corner_rad) * shape.sqrt();
-        let c1 = total * pole_s / zero_s;
-        let c2 = total - c1;
-        Ok(FilterComponents { c1_farad: Some(c1), r2_ohm: zero_s / c2, c2_farad: c2, r3_c3: None, r4_c4: None })
-    }
-}
-
 /// A measured closed-loop response.
 #[derive(Debug, Clone, PartialEq, Serialize)]
 pub struct ResponseTable {

@@ -68,6 +68,8 @@ const HINTS: &[(&str, &str, &str)] = &[
     ("detector", "offset_noise", "\"3 pA/sqrt(Hz)\""),
     ("detector", "pump_noise", "\"20 pA/sqrt(Hz)\""),
     ("loop", "design_divider", "88.5"),
+    ("loop", "third_pole", "0.4"),
+    ("loop", "fourth_pole", "0.4"),
     ("loop", "components", "{ c1 = \"2.2 nF\", r2 = \"510 ohm\", c2 = \"15 nF\", r3 = \"220 ohm\", c3 = \"470 pF\" }"),
     ("loop", "table", "\"h.csv\""),
     ("loop", "edge", "\"unity-gain\""),

@@ -173,6 +173,9 @@ fn charge_table(reader: &mut Reader, section: &Section, load: Load) -> Option<Ch
     Some(ChargeTable { points })
 }
 
+/// Keys that only a designed filter has.
+const DESIGN_KEYS: [&str; 3] = ["design_divider", "third_pole", "fourth_pole"];
+
 /// Reads `[loop]`: exactly one of bandwidth with phase_margin, components, table.
 pub fn loop_filter(reader: &mut Reader, section: &Section, load: Load) -> Option<(LoopPlan, LoopEdge)> {
     let edge = match reader.word(section, "edge").map(|found| found.value) {
@@ -187,10 +190,11 @@ pub fn loop_filter(reader: &mut Reader, section: &Section, load: Load) -> Option
     ];
     let given: Vec<&str> = ways.iter().filter(|(_, given)| *given).map(|(name, _)| *name).collect();
     let plan = match given.as_slice() {
-        ["components" | "table"] if section.value("design_divider").is_some() => {
-            let span = section.value("design_divider").map_or_else(|| section.head(), toml::Spanned::span);
-            let text = "belongs to bandwidth and phase_margin; this filter is given, not designed";
-            reader.problem(&section.key("design_divider"), &span, text);
+        ["components" | "table"] if DESIGN_KEYS.iter().any(|name| section.value(name).is_some()) => {
+            for (name, value) in DESIGN_KEYS.iter().filter_map(|name| section.value(name).map(|value| (name, value))) {
+                let text = "belongs to bandwidth and phase_margin; this filter is given, not designed";
+                reader.problem(&section.key(name), &value.span(), text);
+            }
             return None;
         }
         ["bandwidth"] => LoopPlan::Designed(design(reader, section)?),
@@ -235,7 +239,30 @@ fn design(reader: &mut Reader, section: &Section) -> Option<FilterDesign> {
         reader.problem(&section.key("phase_margin"), &margin.span, text);
         return None;
     }
-    Some(FilterDesign { bandwidth_hz: bandwidth?, phase_margin_deg, design_divider: divider.map(|found| found.value) })
+    let pole_ratios = pole_ratios(reader, section)?;
+    Some(FilterDesign {
+        bandwidth_hz: bandwidth?,
+        phase_margin_deg,
+        design_divider: divider.map(|found| found.value),
+        pole_ratios,
+    })
+}
+
+/// Ratios of the further poles' time constants, each to the pole before it.
+fn pole_ratios(reader: &mut Reader, section: &Section) -> Option<(Option<f64>, Option<f64>)> {
+    let mut ratio = |name: &'static str| {
+        let found = reader.number(section, name);
+        if let Some(found) = found.as_ref().filter(|found| found.value <= 0.0) {
+            reader.problem(&section.key(name), &found.span, "must be above zero");
+        }
+        found.map(|found| found.value)
+    };
+    let (third, fourth) = (ratio("third_pole"), ratio("fourth_pole"));
+    if fourth.is_some() && section.value("third_pole").is_none() {
+        reader.problem(&section.key("fourth_pole"), &section.head(), "needs third_pole");
+        return None;
+    }
+    Some((third, fourth))
 }
 
 fn components(reader: &mut Reader, section: &Section) -> Option<FilterComponents> {

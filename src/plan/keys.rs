@@ -184,6 +184,8 @@ pub const KEYS: &[Key] = &[
     key("loop", "phase_margin", Quantity(Angle, Positive), "phase margin at the design divider"),
     key("loop", "design_divider", Number, "N + K/M of the design")
         .or("geometric mean of the smallest and largest legal N + K/M"),
+    key("loop", "third_pole", Number, "time constant R3·C3 over that of the first pole; C3 = C1/4").or("no third pole"),
+    key("loop", "fourth_pole", Number, "time constant R4·C4 over R3·C3; C4 = C3/4").or("no fourth pole"),
     key("loop", "components", Table("loop.components"), "filter components, instead of bandwidth and margin"),
     key(
         "loop",

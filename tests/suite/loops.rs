@@ -15,7 +15,7 @@ use thornmap::spectrum::ideal_density;
 
 /// A loop designed for 100 kHz at the given margin, sampled at `ratio` times that.
 fn designed(phase_margin_deg: f64, ratio: f64) -> Result<LoopResponse, LoopModelError> {
-    let design = FilterDesign { bandwidth_hz: 1e5, phase_margin_deg, design_divider: None };
+    let design = FilterDesign { bandwidth_hz: 1e5, phase_margin_deg, design_divider: None, pole_ratios: (None, None) };
     let network = FilterNetwork::new(&design.components(2e-3, 30e6, 100.0)?)?;
     LoopResponse::new(&network, LoopPoint { current_a: 2e-3, gain_hz_per_v: 30e6, divider: 100.0, pfd_hz: ratio * 1e5 })
 }
@@ -27,19 +27,65 @@ fn close(found: f64, want: f64, allowed: f64) {
 #[test]
 fn components_of_the_published_design_equations() {
     // Keese 1996; values computed from them.
-    let design = FilterDesign { bandwidth_hz: 20e3, phase_margin_deg: 45.0, design_divider: None };
+    let design =
+        FilterDesign { bandwidth_hz: 20e3, phase_margin_deg: 45.0, design_divider: None, pole_ratios: (None, None) };
     let filter = design.components(5e-3, 20e6, 4500.0).unwrap();
     close(filter.c1_farad.unwrap() / 582.897e-12, 1.0, 1e-5);
     close(filter.c2_farad / 2.81448e-9, 1.0, 1e-5);
     close(filter.r2_ohm / 6826.03, 1.0, 1e-5);
     // Published worked example: 100 kHz, 45 deg: T1 = 659 ns, T2 = 3.844 us.
-    let design = FilterDesign { bandwidth_hz: 1e5, phase_margin_deg: 45.0, design_divider: None };
+    let design =
+        FilterDesign { bandwidth_hz: 1e5, phase_margin_deg: 45.0, design_divider: None, pole_ratios: (None, None) };
     let filter = design.components(1e-3, 10e6, 100.0).unwrap();
     let (c1, t2) = (filter.c1_farad.unwrap(), filter.r2_ohm * filter.c2_farad);
     let t1 = t2 * c1 / (c1 + filter.c2_farad);
     close(t1, 659e-9, 0.5e-9);
     // The page works on with its rounded T1: half a nanosecond there is three here.
     close(t2, 3.844e-6, 3e-9);
+}
+
+/// Z(s) of a loaded ladder from its far end: one volt at the open tuning node, currents and voltages worked back.
+fn ladder(c: &FilterComponents, s: Complex64) -> Complex64 {
+    let (mut volts, mut amperes) = (Complex64::new(1.0, 0.0), Complex64::new(0.0, 0.0));
+    for (ohm, farad) in [c.r4_c4, c.r3_c3].into_iter().flatten() {
+        amperes += s * farad * volts;
+        volts += ohm * amperes;
+    }
+    amperes += volts * (s * c.c1_farad.unwrap_or(0.0) + (c.r2_ohm + (s * c.c2_farad).inv()).inv());
+    amperes.inv()
+}
+
+#[test]
+fn designs_with_more_poles_have_the_bandwidth_and_margin_asked_for() {
+    let mut checked = 0;
+    for phase_margin_deg in [30.0, 45.0, 50.0, 60.0, 70.0] {
+        for pole_ratios in
+            [(Some(0.1), None), (Some(0.4), None), (Some(1.0), None), (Some(0.4), Some(0.4)), (Some(0.9), Some(0.9))]
+        {
+            let design = FilterDesign { bandwidth_hz: 35e3, phase_margin_deg, design_divider: None, pole_ratios };
+            let filter = design.components(2e-3, 30e6, 97.3).unwrap();
+            let (r3, c3) = filter.r3_c3.unwrap();
+            let (c1, c2, t2) = (filter.c1_farad.unwrap(), filter.c2_farad, filter.r2_ohm * filter.c2_farad);
+            close(r3 * c3 / (t2 * c1 / (c1 + c2)), pole_ratios.0.unwrap(), 1e-9);
+            assert_eq!(filter.r4_c4.is_some(), pole_ratios.1.is_some());
+            // A(jω) = I·K·Z/(N·s) by the ladder: one at ω_c, with the margin.
+            let s = Complex64::new(0.0, std::f64::consts::TAU * 35e3);
+            let open = 2e-3 * 30e6 * ladder(&filter, s) / (97.3 * s);
+            close(open.norm(), 1.0, 1e-9);
+            close(180.0 + open.arg().to_degrees(), phase_margin_deg, 1e-5);
+            let network = FilterNetwork::new(&filter).unwrap();
+            close((network.impedance(s) / ladder(&filter, s) - 1.0).norm(), 0.0, 1e-9);
+            checked += 1;
+        }
+    }
+    assert_eq!(checked, 25);
+    let alone = FilterDesign {
+        bandwidth_hz: 35e3,
+        phase_margin_deg: 50.0,
+        design_divider: None,
+        pole_ratios: (None, Some(0.3)),
+    };
+    assert_eq!(alone.components(2e-3, 30e6, 97.3), Err(LoopModelError::FourthWithoutThird));
 }
 
 #[test]
@@ -177,7 +223,8 @@ fn charge_curve_terms_and_table() {
 fn an_offset_current_pays_at_the_pfd_frequency() {
     // PHYSICS: 14 uA instead of 1 nA is −63 instead of −146 dBc in one plan; here the difference, which only the
     // current and its sinc decide.
-    let design = FilterDesign { bandwidth_hz: 6e4, phase_margin_deg: 50.0, design_divider: None };
+    let design =
+        FilterDesign { bandwidth_hz: 6e4, phase_margin_deg: 50.0, design_divider: None, pole_ratios: (None, None) };
     let network = FilterNetwork::new(&design.components(2.5e-3, 32e6, 90.0).unwrap()).unwrap();
     let level = |current| reference_tone_dbc(&network, current, 2.5e-3, 32e6, 19.2e6, 1).unwrap();
     let sinc = (PI * 14e-6 / 2.5e-3).sin() / (PI * 14e-6 / 2.5e-3);

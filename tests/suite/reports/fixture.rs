@@ -136,6 +136,7 @@ pub fn plan(count: u64) -> Plan {
             bandwidth_hz: 60e3,
             phase_margin_deg: 50.0,
             design_divider: None,
+            pole_ratios: (None, None),
         }),
         boundary: Boundary {
             edge: LoopEdge::UnityGain,
