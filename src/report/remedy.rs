@@ -109,7 +109,7 @@ fn set_sentences(plan: &Plan, set: &SettingSet) -> Vec<String> {
             names.join(" and ")
         ),
     }];
-    if !names.is_empty() {
+    if names.len() > 1 {
         sentences.push(match &set.cover.proof {
             Proof::Apart { channels } => format!(
                 "Certificate: {} share no setting, so no smaller set serves them.",

@@ -66,12 +66,7 @@ const VALUES: &[Case] = &[
         "loop.design_divider",
         &["above zero"],
     ),
-    (
-        r#"phase_margin = "50 deg""#,
-        "phase_margin = \"50 deg\"\nthird_pole = @0",
-        "loop.third_pole",
-        &["above zero"],
-    ),
+    (r#"phase_margin = "50 deg""#, "phase_margin = \"50 deg\"\nthird_pole = @0", "loop.third_pole", &["above zero"]),
     ("largest_q = 3", "largest_q = @0", "boundary.largest_q", &["0", "from 1"]),
     ("largest_q = 3", "largest_q = @\"3\"", "boundary.largest_q", &["whole"]),
     ("largest_q = 3", "guard = @\"-1 kHz\"", "boundary.guard", &["-1 kHz"]),
