@@ -17,7 +17,7 @@ pub fn structure(typed: &str) -> Result<Structure, Failure> {
     })
 }
 
-/// Reads `none` or `STAGE:REGISTER:SEED[:WEIGHT]`.
+/// Reads `none`, `STAGE:REGISTER:SEED[:WEIGHT]` or `white:STAGE:SEED`.
 ///
 /// # Errors
 /// `Content` with the form that is expected.
@@ -25,8 +25,17 @@ pub fn dither(typed: &str) -> Result<Dither, Failure> {
     if typed == "none" {
         return Ok(Dither::None);
     }
-    let wrong =
-        || Failure::Content(format!("error: dither \"{typed}\": expected none or STAGE:REGISTER:SEED, as in 2:23:1"));
+    if let Some(rest) = typed.strip_prefix("white:") {
+        let found = rest.split_once(':').and_then(|(stage, seed)| Some((stage.parse().ok()?, seed.parse().ok()?)));
+        return found.map(|(stage, seed)| Dither::White { stage, seed, weight: 1 }).ok_or_else(|| {
+            Failure::Content(format!("error: dither \"{typed}\": expected white:STAGE:SEED, as in white:1:7"))
+        });
+    }
+    let wrong = || {
+        Failure::Content(format!(
+            "error: dither \"{typed}\": expected none, STAGE:REGISTER:SEED as in 2:23:1, or white:STAGE:SEED"
+        ))
+    };
     let parts: Vec<u64> = typed.split(':').map(str::parse).collect::<Result<_, _>>().map_err(|_| wrong())?;
     let (stage, register, seed, weight) = match parts.as_slice() {
         [stage, register, seed] => (*stage, *register, *seed, 1),

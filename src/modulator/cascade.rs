@@ -4,6 +4,7 @@ use super::checked::ModulatorConfig;
 use super::config::Dither;
 use super::register::Register;
 use super::sequence::Modulator;
+use super::white::WhiteBits;
 
 /// What one stage does with its input: the only place where the multi-stage structures differ.
 pub(super) trait StageRule: Copy + Send {
@@ -114,12 +115,21 @@ impl InputSource for Silent {
     }
 }
 
-/// A register bit with a weight, at one stage.
+/// Where the bits come from.
+#[derive(Debug, Clone, Copy, PartialEq, Eq)]
+pub(super) enum Bits {
+    /// A maximal-length register.
+    Register(Register),
+    /// A seeded generator of independent bits.
+    White(WhiteBits),
+}
+
+/// A bit with a weight, at one stage.
 #[derive(Debug, Clone, Copy, PartialEq, Eq)]
 pub(super) struct WeightedBit {
     pub(super) index: usize,
     pub(super) weight: u64,
-    pub(super) register: Register,
+    pub(super) bits: Bits,
 }
 
 impl WeightedBit {
@@ -130,8 +140,13 @@ impl WeightedBit {
             Dither::Register { stage, register, seed, weight } => Some(Self {
                 index: usize::from(stage) - 1,
                 weight,
-                register: Register::new(register, seed).expect("a checked configuration holds a listed register"),
+                bits: Bits::Register(
+                    Register::new(register, seed).expect("a checked configuration holds a listed register"),
+                ),
             }),
+            Dither::White { stage, seed, weight } => {
+                Some(Self { index: usize::from(stage) - 1, weight, bits: Bits::White(WhiteBits::new(seed)) })
+            }
         }
     }
 }
@@ -139,7 +154,14 @@ impl WeightedBit {
 impl InputSource for WeightedBit {
     #[inline(always)]
     fn added_at(&mut self, index: usize) -> u64 {
-        if index == self.index { self.weight * self.register.next_bit() } else { 0 }
+        if index != self.index {
+            return 0;
+        }
+        self.weight
+            * match &mut self.bits {
+                Bits::Register(register) => register.next_bit(),
+                Bits::White(white) => white.next_bit(),
+            }
     }
 }
 

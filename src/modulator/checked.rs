@@ -67,7 +67,7 @@ impl ModulatorConfig {
             return Err(ModulatorError::NumeratorOutOfRange { found: k, largest: m - 1 });
         }
         let held = settings.structure == Structure::Integer || (k == 0 && !settings.runs_at_zero);
-        if let Dither::Register { weight, .. } = settings.dither
+        if let Some((_, weight)) = settings.dither.stage_and_weight()
             && weight > m
             && !held
         {
@@ -166,7 +166,8 @@ impl ModulatorConfig {
         u64::BITS - self.modulus.get().leading_zeros()
     }
 
-    /// Returns what the dither adds to the mean output, exact: w·2^(L−1)/((2^L − 1)·M) at stage 1, else 0.
+    /// Returns what the dither adds to the mean output at stage 1, else 0: exact for a register,
+    /// w·2^(L−1)/((2^L − 1)·M); the expected value w/(2M) for white bits.
     ///
     /// # Panics
     /// Never: the denominator has at most 31 + 48 bits.
@@ -178,7 +179,11 @@ impl ModulatorConfig {
                 let period = (1i128 << register) - 1;
                 Exact::new(ones, period * i128::from(self.modulus.get())).expect("the denominator is never zero")
             }
-            Dither::Register { .. } | Dither::None => Exact::ZERO,
+            Dither::White { stage: 1, weight, .. } => {
+                let m = i128::from(self.modulus.get());
+                Exact::new(i128::from(weight), 2 * m).expect("a modulus is at least 1")
+            }
+            Dither::Register { .. } | Dither::White { .. } | Dither::None => Exact::ZERO,
         }
     }
 
@@ -201,10 +206,7 @@ impl ModulatorConfig {
     /// It can for a stage r ≤ order − 1 only (Pamarti & Galton 2007, from memory).
     #[must_use]
     pub fn dither_can_whiten(&self) -> Option<bool> {
-        match self.dither() {
-            Dither::Register { stage, .. } => Some(stage < self.order),
-            Dither::None => None,
-        }
+        self.dither().stage_and_weight().map(|(stage, _)| stage < self.order)
     }
 }
 

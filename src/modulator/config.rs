@@ -74,6 +74,40 @@ pub enum Dither {
         /// Value added for a one, in least significant bits of the accumulator.
         weight: u64,
     },
+    /// Independent fair bits of a seeded generator, for statistics over seeds; no hardware has them.
+    White {
+        /// Stage whose input takes the bit, from 1.
+        stage: u8,
+        /// Seed of the generator.
+        seed: u64,
+        /// Value added for a one, in least significant bits of the accumulator.
+        weight: u64,
+    },
+}
+
+impl Dither {
+    /// Returns the dither in words.
+    #[must_use]
+    pub fn words(self) -> String {
+        match self {
+            Self::None => "no dither".to_owned(),
+            Self::Register { stage, register, seed, weight } => {
+                format!("{register}-bit dither at stage {stage} (seed {seed}, weight {weight})")
+            }
+            Self::White { stage, seed, weight } => {
+                format!("white dither at stage {stage} (generator seed {seed}, weight {weight})")
+            }
+        }
+    }
+
+    /// Returns the stage whose input takes the bit and the value of a one; `None` without dither.
+    #[must_use]
+    pub const fn stage_and_weight(self) -> Option<(u8, u64)> {
+        match self {
+            Self::None => None,
+            Self::Register { stage, weight, .. } | Self::White { stage, weight, .. } => Some((stage, weight)),
+        }
+    }
 }
 
 /// A modulus, 1 … 2^48.
@@ -176,7 +210,7 @@ impl ModulatorSettings {
 
     /// Checks stage, register and weight of the dither.
     fn check_dither(&self) -> Result<(), ModulatorError> {
-        let Dither::Register { stage, register, seed, weight } = self.dither else {
+        let Some((stage, weight)) = self.dither.stage_and_weight() else {
             return Ok(());
         };
         let highest = self.structure.last_dither_stage(self.order);
@@ -186,12 +220,14 @@ impl ModulatorSettings {
         if !(1..=highest).contains(&stage) {
             return Err(ModulatorError::DitherStageOutOfRange { found: stage, highest });
         }
-        if tap_pair(register).is_none() {
-            return Err(ModulatorError::UnknownRegister { found: register });
-        }
-        let largest = (1u64 << register) - 1;
-        if !(1..=largest).contains(&seed) {
-            return Err(ModulatorError::RegisterSeedOutOfRange { found: seed, register, largest });
+        if let Dither::Register { register, seed, .. } = self.dither {
+            if tap_pair(register).is_none() {
+                return Err(ModulatorError::UnknownRegister { found: register });
+            }
+            let largest = (1u64 << register) - 1;
+            if !(1..=largest).contains(&seed) {
+                return Err(ModulatorError::RegisterSeedOutOfRange { found: seed, register, largest });
+            }
         }
         if !(1..=Modulus::LARGEST).contains(&weight) {
             return Err(ModulatorError::DitherWeightOutOfRange { found: weight, largest: Modulus::LARGEST });

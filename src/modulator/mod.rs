@@ -25,6 +25,7 @@ mod prime;
 mod range;
 mod register;
 mod sequence;
+mod white;
 pub mod word;
 
 pub use checked::ModulatorConfig;

@@ -11,6 +11,7 @@
 use super::checked::ModulatorConfig;
 use super::config::{Dither, Structure};
 use super::register::tap_pair;
+use super::white::WhiteBits;
 
 /// A modulator that is stepped by its recurrences.
 #[derive(Debug, Clone, PartialEq, Eq)]
@@ -19,14 +20,16 @@ struct Definition {
     residues: Vec<i128>,
     /// Last carries.
     carries: Vec<i128>,
-    /// Bits of the register, the next one first; empty without dither.
+    /// Bits of the register, the next one first; empty without one.
     bits: Vec<u8>,
+    /// Generator of white bits.
+    white: WhiteBits,
 }
 
 impl Definition {
     fn new(config: &ModulatorConfig) -> Self {
         let bits = match config.dither() {
-            Dither::None => Vec::new(),
+            Dither::None | Dither::White { .. } => Vec::new(),
             Dither::Register { register, seed, .. } => {
                 (0..register).rev().map(|place| u8::from((seed >> place) & 1 == 1)).collect()
             }
@@ -35,6 +38,10 @@ impl Definition {
             residues: config.seeds().iter().map(|seed| i128::from(*seed)).collect(),
             carries: vec![0; config.seeds().len()],
             bits,
+            white: WhiteBits::new(match config.dither() {
+                Dither::White { seed, .. } => seed,
+                Dither::None | Dither::Register { .. } => 0,
+            }),
         }
     }
 
@@ -55,6 +62,9 @@ impl Definition {
         let (dither_stage, dither) = match config.dither() {
             Dither::None => (0, 0),
             Dither::Register { stage, weight, .. } => (usize::from(stage), i128::from(weight) * self.next_bit()),
+            Dither::White { stage, weight, .. } => {
+                (usize::from(stage), i128::from(weight) * i128::from(self.white.next_bit()))
+            }
         };
         let mut input = i128::from(config.k());
         if config.structure() == Structure::ErrorFeedback {

@@ -81,6 +81,10 @@ pub fn period_within(config: &ModulatorConfig, most_steps: u64) -> Period {
     let m = config.modulus().get();
     let plain = PlainStage { modulus: m };
     let dithered = config.dither() != Dither::None;
+    if matches!(config.dither(), Dither::White { .. }) {
+        // The generator repeats after 2^64 bits, the whole never in practice.
+        return Period::from_run(None);
+    }
     match config.structure() {
         Structure::Integer => Period::known(1u32.into(), PeriodBasis::Held),
         Structure::Mash if !dithered => closed(cascade_period(config.k(), config.seeds(), m).into()),

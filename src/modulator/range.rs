@@ -2,7 +2,7 @@
 
 use super::cascade::{InputSource, Silent, Stage, StageRule, WeightedBit};
 use super::checked::{ModulatorConfig, Shaping};
-use super::config::{Dither, Structure};
+use super::config::Structure;
 use super::sequence::{prime_stage, start};
 
 /// Returns the smallest and the largest output that the structure can give, both included, start-up included.
@@ -24,10 +24,7 @@ pub fn output_range(config: &ModulatorConfig) -> (i64, i64) {
 
 /// Returns (stage from 1, weight) of the dither; (0, 0) without.
 fn dither_of(config: &ModulatorConfig) -> (usize, u64) {
-    match config.dither() {
-        Dither::None => (0, 0),
-        Dither::Register { stage, weight, .. } => (usize::from(stage), weight),
-    }
+    config.dither().stage_and_weight().map_or((0, 0), |(stage, weight)| (usize::from(stage), weight))
 }
 
 /// Returns the largest carry of each stage with modulus M: inputs are at most M − 1 (also residue plus carry: a stage

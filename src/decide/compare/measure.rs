@@ -151,8 +151,6 @@ pub(super) fn measure(plan: &Plan) -> Result<Figures, AssessError> {
 
 /// Returns whether the plan's dither can whiten; it cannot beyond stage order − 1.
 fn whitening(plan: &Plan) -> Option<bool> {
-    match plan.modulator.settings.dither {
-        crate::modulator::Dither::None => None,
-        crate::modulator::Dither::Register { stage, .. } => Some(stage < plan.modulator.settings.order),
-    }
+    let settings = &plan.modulator.settings;
+    settings.dither.stage_and_weight().map(|(stage, _)| stage < settings.order)
 }

@@ -36,12 +36,7 @@ impl ModulatorOption {
             ModulusRule::Largest(modulus) => format!("M up to {}", modulus.get()),
             ModulusRule::Step(step) => format!("M for a step of {step}"),
         };
-        let dither = match settings.dither {
-            Dither::None => "no dither".to_owned(),
-            Dither::Register { stage, register, seed, weight } => {
-                format!("{register}-bit dither at stage {stage} (seed {seed}, weight {weight})")
-            }
-        };
+        let dither = settings.dither.words();
         let seeds: Vec<String> = settings.seeds.iter().map(u64::to_string).collect();
         let seeds = if seeds.is_empty() { "seeds 0".to_owned() } else { format!("seeds {}", seeds.join(", ")) };
         format!("{} order {}, {modulus}, {seeds}, {dither}", settings.structure.word(), settings.order)
@@ -80,7 +75,7 @@ impl ModulatorOption {
         };
         let width = u64::from(u64::BITS - (largest - 1).leading_zeros());
         let register = match self.settings.dither {
-            Dither::None => 0,
+            Dither::None | Dither::White { .. } => 0,
             Dither::Register { register, .. } => u64::from(register),
         };
         u64::from(self.settings.order) * width + register

@@ -143,10 +143,7 @@ impl Change {
             Self::Injection(injection) => format!("injection {injection}"),
             Self::OutputDivider(divider) => format!("output divider {divider}"),
             Self::Order(order) => format!("order {order}"),
-            Self::Dither(Dither::None) => "no dither".to_owned(),
-            Self::Dither(Dither::Register { stage, register, seed, weight }) => {
-                format!("{register}-bit dither at stage {stage}, seed {seed}, weight {weight}")
-            }
+            Self::Dither(dither) => dither.words(),
             Self::Seed(seed) => format!("first seed {seed}"),
             Self::Modulus(modulus) => format!("modulus {}", modulus.get()),
             Self::OffsetCurrent(current_a) => format!("offset current {:.4} uA", current_a * 1e6),

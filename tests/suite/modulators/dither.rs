@@ -2,8 +2,8 @@
 
 use thornmap::base::Exact;
 use thornmap::modulator::{
-    Dither, ModulatorConfig, ModulatorSettings, REGISTER_LENGTHS, Register, Structure, oracle, output_range, period,
-    period_within, tap_pair, transient,
+    Dither, ModulatorConfig, ModulatorSettings, Modulus, REGISTER_LENGTHS, Register, Structure, oracle, output_range,
+    period, period_within, start, tap_pair, transient,
 };
 
 use super::{Draw, config_of, run, settings};
@@ -202,4 +202,51 @@ fn combined_length_is_bounded() {
     let config = config_of(&dithered(Structure::Mash, 3, &[1], (2, 7, 1)), 256, 77);
     assert!(period_within(&config, 1000).length.is_none());
     assert!(period_within(&config, 1 << 26).is_exact);
+}
+
+#[test]
+fn white_bits_are_fair_independent_and_run_as_defined() {
+    let settings = |order: u8, stage: u8, seed: u64| ModulatorSettings {
+        structure: Structure::Mash,
+        order,
+        seeds: vec![],
+        dither: Dither::White { stage, seed, weight: 1 },
+        noise_transfer: None,
+        runs_at_zero: false,
+    };
+    let mut cases = 0;
+    for order in 1..=5 {
+        for stage in 1..=order {
+            let config =
+                ModulatorConfig::new(&settings(order, stage, 7), Modulus::new(1 << 10).unwrap(), 321, true).unwrap();
+            let mut fast = vec![0; 3000];
+            start(&config).fill(&mut fast);
+            let fast: Vec<i128> = fast.into_iter().map(i128::from).collect();
+            assert_eq!(fast, oracle::outputs(&config, 3000), "order {order}, stage {stage}");
+            assert_eq!(period(&config).length, None);
+            cases += 1;
+        }
+    }
+    assert_eq!(cases, 15);
+    // A first-order modulator with K = 0 counts the bits: the mean is half a step, each generator's own.
+    let run = |seed: u64| {
+        let mut held = settings(1, 1, seed);
+        held.runs_at_zero = true;
+        let config = ModulatorConfig::new(&held, Modulus::new(2).unwrap(), 0, true).unwrap();
+        let mut outputs = vec![0; 1 << 16];
+        start(&config).fill(&mut outputs);
+        outputs
+    };
+    let (a, b) = (run(1), run(2));
+    assert_ne!(a, b);
+    for outputs in [&a, &b] {
+        let mean = outputs.iter().map(|y| f64::from(*y)).sum::<f64>() / 65_536.0;
+        // Bits of variance 1/4: six sigma of the mean of 2^16 halved bits.
+        assert!((mean - 0.25).abs() < 6.0 * 0.25 / 256.0, "{mean}");
+    }
+    assert_eq!(
+        settings(3, 4, 1).check().unwrap_err().to_string(),
+        settings(3, 4, 2).check().unwrap_err().to_string(),
+        "no fourth stage"
+    );
 }
