@@ -7,6 +7,7 @@ mod listing;
 mod noise;
 mod placement;
 mod result;
+mod sequence;
 mod setup;
 mod tolerance;
 mod verdict;
@@ -19,6 +20,10 @@ pub use lines::{FamilyLines, Line, LinesError, PeriodLine, Scratch};
 pub use noise::{ChannelNoise, ModulatorShare, channel_budget};
 pub use placement::{Placement, PlacementError, place};
 pub use result::{BoundaryNear, ChannelResult, Contributions, Illegal, Method, Origin, Reason, Rule, Tone, Verdict};
+pub use sequence::{
+    Capture, CaptureTone, DitherFacts, Recognised, Recognition, Search, SeedTried, SequenceFacts, SequenceLine,
+    best_seeds, captured_tones, recognise, sequence_facts,
+};
 pub use setup::{AssessError, LoopSource, Setup, gain_at, interpolate};
 pub use verdict::{Evidence, MaskState, judge};
 pub use view::{SpectrumView, spectrum_view};

@@ -23,6 +23,8 @@ pub enum Command {
     Survey(SurveyArguments),
     /// Show one channel in full, with the proof of its verdict
     Channel(ChannelArguments),
+    /// Run one modulator: exact period, mean, range, histogram, spectrum; write the sequence, or read a captured one
+    Sequence(Box<SequenceArguments>),
     /// Weigh modulators on a plan: structures, orders, dithers, seeds, moduli; ranked with reasons
     Compare(CompareArguments),
     /// Find the cheapest cure of each bad channel, and the smallest set of PFD frequencies that leaves none bad
@@ -216,4 +218,70 @@ pub struct RemedyArguments {
     #[command(flatten)]
     #[allow(missing_docs, reason = "clap shows the options of the group itself")]
     pub common: CommonOptions,
+}
+
+/// Arguments of `sequence`.
+#[derive(Debug, Args)]
+#[command(group(clap::ArgGroup::new("source").required(true).multiple(true).args(["plan", "word", "read"])))]
+pub struct SequenceArguments {
+    /// Plan file (TOML); the word and the modulator are those of its channel
+    #[arg(value_name = "PLAN", value_hint = ValueHint::FilePath, requires = "frequency", conflicts_with = "word")]
+    pub plan: Option<PathBuf>,
+    /// Channel frequency with unit, before injection
+    #[arg(value_name = "FREQUENCY", requires = "plan")]
+    pub frequency: Option<String>,
+    /// Channel group [default: the first whose range holds the frequency]
+    #[arg(long, value_name = "NAME", requires = "plan")]
+    pub group: Option<String>,
+    /// Numerator and modulus; the modulus may be 2^b
+    #[arg(long, value_name = "K/M")]
+    pub word: Option<String>,
+    /// Order [default: 3, or the plan's]
+    #[arg(long, value_name = "N", value_parser = clap::value_parser!(u8).range(0..=5))]
+    pub order: Option<u8>,
+    /// mash, prime-mash, output-fed, error-feedback or integer [default: mash, or the plan's]
+    #[arg(long, value_name = "NAME")]
+    pub structure: Option<String>,
+    /// Start values of the stages, first stage first [default: zeros, or the plan's]
+    #[arg(long, value_name = "A,B,C", value_delimiter = ',')]
+    pub seeds: Option<Vec<u64>>,
+    /// none, STAGE:REGISTER:SEED or white:STAGE:SEED [default: none, or the plan's]
+    #[arg(long, value_name = "DITHER")]
+    pub dither: Option<String>,
+    /// Coefficients h_1,h_2,... of an error filter (error-feedback): noise transfer 1 - h_1 z^-1 - ...
+    #[arg(long, value_name = "H,H", value_delimiter = ',', allow_hyphen_values = true)]
+    pub ntf: Option<Vec<i64>>,
+    /// Outputs looked at and written [default: one period where it fits, else 131072]
+    #[arg(long, value_name = "N", value_parser = clap::value_parser!(u64).range(1..=1 << 26))]
+    pub length: Option<u64>,
+    /// PFD frequency with unit: offsets in Hz instead of shares of it [default: the plan's]
+    #[arg(long, value_name = "HZ")]
+    pub rate: Option<String>,
+    /// Write the outputs: the ending .csv, .hex or .npy decides the form
+    #[arg(long, value_name = "FILE", value_hint = ValueHint::FilePath, conflicts_with = "read")]
+    pub write: Option<PathBuf>,
+    /// Draw the spectrum (SVG)
+    #[arg(long, value_name = "FILE", value_hint = ValueHint::FilePath, conflicts_with = "read")]
+    pub plot: Option<PathBuf>,
+    /// Analyse a captured divider sequence: one integer a line, a csv column, hex words with head, npy
+    #[arg(long, value_name = "FILE", value_hint = ValueHint::FilePath)]
+    pub read: Option<PathBuf>,
+    /// Column of a captured csv [default: output]
+    #[arg(long, value_name = "NAME", requires = "read")]
+    pub column: Option<String>,
+    /// Modulus of the captured run, where it is known: 2^b or a whole number
+    #[arg(long, value_name = "M", requires = "read")]
+    pub modulus: Option<String>,
+    /// Try so many first seeds and rank them: longest sequence, then lowest strongest line
+    #[arg(long, value_name = "COUNT", value_parser = clap::value_parser!(u64).range(1..=1 << 16), conflicts_with = "read")]
+    pub best_seed: Option<u64>,
+    /// Lines up to this offset count for --best-seed, with unit [default: the plan's loop edge, or all]
+    #[arg(long, value_name = "HZ", requires = "best_seed")]
+    pub within: Option<String>,
+    /// Print the result as JSON on standard output, and nothing else there
+    #[arg(long)]
+    pub json: bool,
+    /// No messages on standard error unless something fails
+    #[arg(long, short)]
+    pub quiet: bool,
 }

@@ -9,7 +9,7 @@ use crate::report::{add_files, check_target, comparison_files, comparison_json, 
 
 use super::arguments::CompareArguments;
 use super::failure::Failure;
-use super::modulator_words::{dither, structure};
+use super::modulator_words::{dither, modulus, structure};
 use super::output::{self, Voice};
 use super::plan_file;
 use super::progress::Bar;
@@ -65,7 +65,14 @@ fn options(plan: &Plan, arguments: &CompareArguments) -> Result<Vec<ModulatorOpt
     } else {
         arguments.seeds.clone()
     };
-    let moduli = arguments.moduli.iter().map(|word| modulus(word)).collect::<Result<Vec<ModulusRule>, _>>()?;
+    let moduli = arguments
+        .moduli
+        .iter()
+        .map(|word| modulus("--moduli", word))
+        .collect::<Result<Vec<Modulus>, _>>()?
+        .into_iter()
+        .map(ModulusRule::Fixed)
+        .collect::<Vec<_>>();
     let moduli = if moduli.is_empty() { vec![own.modulus] } else { moduli };
     let mut options = Vec::new();
     for structure in &structures {
@@ -88,15 +95,4 @@ fn options(plan: &Plan, arguments: &CompareArguments) -> Result<Vec<ModulatorOpt
         }
     }
     Ok(options)
-}
-
-/// Reads a modulus: a whole number or `2^b`.
-fn modulus(typed: &str) -> Result<ModulusRule, Failure> {
-    let number = match typed.strip_prefix("2^") {
-        Some(bits) => bits.parse::<u32>().ok().filter(|bits| (1..=48).contains(bits)).map(|bits| 1u64 << bits),
-        None => typed.parse::<u64>().ok().filter(|number| *number >= 2),
-    };
-    number.and_then(|number| Modulus::new(number).ok()).map(ModulusRule::Fixed).ok_or_else(|| {
-        Failure::Content(format!("error: --moduli \"{typed}\": expected a whole number from 2 to 2^48, or 2^b"))
-    })
 }

@@ -10,6 +10,7 @@ mod output;
 mod plan_file;
 mod progress;
 mod remedy;
+mod sequence;
 mod survey;
 
 use std::process::ExitCode;
@@ -38,6 +39,7 @@ fn dispatch(command: &Command) -> Result<(), Failure> {
     match command {
         Command::Survey(arguments) => survey::run(arguments),
         Command::Channel(arguments) => channel::run(arguments),
+        Command::Sequence(arguments) => sequence::run(arguments),
         Command::Compare(arguments) => compare::run(arguments),
         Command::Remedy(arguments) => remedy::run(arguments),
         Command::Identify(arguments) => identify::run(arguments),

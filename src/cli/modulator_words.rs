@@ -1,6 +1,6 @@
 //! Modulator settings as they are typed on the command line.
 
-use crate::modulator::{Dither, Structure};
+use crate::modulator::{Dither, Modulus, Structure};
 
 use super::failure::Failure;
 
@@ -47,5 +47,19 @@ pub fn dither(typed: &str) -> Result<Dither, Failure> {
         register: u8::try_from(register).map_err(|_| wrong())?,
         seed,
         weight,
+    })
+}
+
+/// Reads a modulus, a whole number or `2^b`; `argument` names it in messages.
+///
+/// # Errors
+/// `Content` with what is allowed.
+pub fn modulus(argument: &str, typed: &str) -> Result<Modulus, Failure> {
+    let number = match typed.trim().strip_prefix("2^") {
+        Some(bits) => bits.parse::<u32>().ok().filter(|bits| (1..=48).contains(bits)).map(|bits| 1u64 << bits),
+        None => typed.trim().parse::<u64>().ok().filter(|number| *number >= 2),
+    };
+    number.and_then(|number| Modulus::new(number).ok()).ok_or_else(|| {
+        Failure::Content(format!("error: {argument} \"{typed}\": expected a whole number from 2 to 2^48, or 2^b"))
     })
 }

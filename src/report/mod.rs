@@ -15,6 +15,8 @@ mod paint;
 mod plots;
 mod positions;
 mod remedy;
+mod sequence;
+mod sequence_files;
 mod survey_json;
 mod svg_backend;
 mod write;
@@ -28,6 +30,8 @@ pub use identification::{identification_json, identification_text};
 pub use json::json_text;
 pub use positions::{hunt_json, hunt_text, intervals_json, intervals_text};
 pub use remedy::{remedy_files, remedy_json, remedy_text};
+pub use sequence::{OffsetScale, capture_json, capture_text, seeds_text, sequence_json, sequence_plot, sequence_text};
+pub use sequence_files::{CaptureError, SequenceForm, read_capture, sequence_bytes};
 pub use survey_json::survey_json;
 pub use write::{add_files, check_target, write_set};
 

@@ -13,6 +13,7 @@ mod outside;
 mod plans;
 mod remedies;
 mod reports;
+mod sequences;
 mod spectra;
 mod surveys;
 mod tree;

@@ -3,8 +3,11 @@
 mod boundaries;
 mod frame;
 mod margins;
+mod sequence;
 mod spectrum;
 mod tone_map;
+
+pub(crate) use sequence::sequence_svg;
 
 use super::ReportError;
 use super::svg_backend::standalone;
