@@ -84,7 +84,7 @@ fn periods_means_and_statistics_are_exact() {
         }
         assert_eq!(Some(count), found["samples"].as_i64());
         // The default length is one period; without a first transient the sum is K/M of it.
-        assert_eq!(count as u64, period);
+        assert_eq!(count, i64::try_from(period).unwrap());
         if order == 1 {
             assert_eq!(sum, 77);
         }
