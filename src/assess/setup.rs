@@ -5,13 +5,14 @@ use std::collections::BTreeMap;
 use rayon::prelude::*;
 
 use crate::base::{Assumption, Basis, Exact, ExactError, Frequency};
-use crate::loop_model::{FilterComponents, FilterNetwork, LoopModelError, LoopPoint, LoopResponse};
+use crate::loop_model::{FilterComponents, FilterNetwork, LoopModelError, LoopPoint, LoopResponse, OscillatorNoise};
 use crate::plan::{Anchor, AnchorPlace, Gain, LoopPlan, Plan};
 use crate::spectrum::FftStage;
 use crate::tones::{AnchorLevel, Mechanism, Transfer, nearest_fraction};
 
 use super::lines::{LinesError, Scratch};
 use super::placement::{Placement, PlacementError, place};
+use super::verdict::hertz;
 
 /// Why a plan is refused as a whole.
 #[derive(Debug, Clone, PartialEq, thiserror::Error)]
@@ -136,6 +137,7 @@ impl<'p> Setup<'p> {
             fft: FftStage::new(),
         };
         setup.carry_anchors()?;
+        setup.warnings.extend(unused(plan));
         Ok(setup)
     }
 
@@ -258,6 +260,40 @@ impl<'p> Setup<'p> {
                 Basis::Default,
             );
         }
+        list.extend(self.extrapolated());
+        list
+    }
+
+    /// Returns every stretch of offsets on which noise is carried beyond its points.
+    fn extrapolated(&self) -> Vec<Assumption> {
+        let (low_hz, high_hz) = self
+            .plan
+            .groups
+            .iter()
+            .map(|group| group.limits.integration_hz)
+            .fold((f64::INFINITY, 0.0f64), |(low, high), limits| (low.min(limits.0), high.max(limits.1)));
+        let oscillator = match &self.plan.oscillator.noise {
+            Some(OscillatorNoise::Points(points)) => Some(points),
+            Some(OscillatorNoise::Leeson { .. }) | None => None,
+        };
+        let sources = [
+            ("reference.noise", self.plan.reference.noise.as_ref(), "the first segment's slope", "flat"),
+            ("oscillator.noise", oscillator, "the first segment's slope, at least -30 dB a decade", "-20 dB a decade"),
+        ];
+        let mut list = Vec::new();
+        for (key, points, below, above) in sources {
+            let Some(points) = points else { continue };
+            let first_hz = points.points().first().map_or(0.0, |point| point.0);
+            for (from_hz, to_hz) in points.extrapolated_hz(low_hz, high_hz) {
+                let rule = if to_hz <= first_hz { below } else { above };
+                list.push(Assumption {
+                    key: key.to_owned(),
+                    value: format!("carried from {} to {} by {rule}", hertz(from_hz), hertz(to_hz)),
+                    basis: Basis::Extrapolated,
+                    note: None,
+                });
+            }
+        }
         list
     }
 
@@ -350,6 +386,25 @@ impl<'p> Setup<'p> {
             }
         }
     }
+}
+
+/// Returns a doubt for each figure that is given but enters no result.
+fn unused(plan: &Plan) -> Vec<String> {
+    let detector = &plan.detector;
+    [
+        (
+            detector.pump_noise_a_per_rthz.is_some(),
+            "detector.pump_noise is not added: it is taken as inside detector.floor",
+        ),
+        (
+            detector.reset_delay_s.is_some(),
+            "detector.reset_delay enters no prediction: the static charge curve has no place for it",
+        ),
+    ]
+    .into_iter()
+    .filter(|(is_given, _)| *is_given)
+    .map(|(_, text)| text.to_owned())
+    .collect()
 }
 
 /// Returns what a loop does to a tone.

@@ -1,7 +1,7 @@
 //! `channel`: one channel in full.
 
 use crate::assess::{ChannelResult, Setup, SpectrumView, spectrum_view};
-use crate::base::{Dimension, Frequency, parse_quantity};
+use crate::base::{Assumption, Dimension, Frequency, parse_quantity};
 use crate::plan::Plan;
 use crate::report::{channel_json, channel_text};
 
@@ -18,11 +18,12 @@ use super::survey::{assess_failure, flagged, in_pool, report_failure};
 pub fn run(arguments: &ChannelArguments) -> Result<(), Failure> {
     let plan = plan_file::read(&arguments.plan)?;
     let channel = frequency("FREQUENCY", &arguments.frequency)?;
-    let (result, view) = in_pool(arguments.common.jobs, || assess(&plan, channel, arguments.group.as_deref()))??;
+    let (result, view, assumptions) =
+        in_pool(arguments.common.jobs, || assess(&plan, channel, arguments.group.as_deref()))??;
     if arguments.common.json {
-        output::print(&channel_json(&result, view.as_ref()).map_err(report_failure)?)?;
+        output::print(&channel_json(&result, view.as_ref(), &assumptions).map_err(report_failure)?)?;
     } else {
-        output::print(&channel_text(&plan, &result))?;
+        output::print(&channel_text(&plan, &result, &assumptions))?;
     }
     let voice = Voice::from_quiet(arguments.common.quiet);
     for warning in &result.warnings {
@@ -52,7 +53,7 @@ fn assess(
     plan: &Plan,
     channel: Frequency,
     group: Option<&str>,
-) -> Result<(ChannelResult, Option<SpectrumView>), Failure> {
+) -> Result<(ChannelResult, Option<SpectrumView>, Vec<Assumption>), Failure> {
     let Some((group_index, place)) = plan.locate(channel, group) else {
         return Err(Failure::Content(not_held(plan, channel, group)));
     };
@@ -66,7 +67,7 @@ fn assess(
     }
     let view =
         spectrum_view(&setup, group_index, channel, &mut scratch).map_err(|error| assess_failure(plan, &error))?;
-    Ok((result, view))
+    Ok((result, view, setup.assumptions()))
 }
 
 /// Returns why no group holds a channel, with the ranges there are.

@@ -9,6 +9,7 @@ mod noise_points;
 mod reference_tone;
 mod response;
 mod settings;
+mod stability;
 
 pub use charge::{ChargeCurve, ChargeTerms, static_charge_cycles};
 pub use design::FilterDesign;

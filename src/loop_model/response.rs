@@ -6,10 +6,13 @@ use num_complex::Complex64;
 
 use super::network::FilterNetwork;
 use super::settings::{LoopModelError, ResponseTable};
+use super::stability::poles_outside;
 
 /// Ratio of PFD frequency to unity-gain frequency below which a continuous view misleads
 /// (Gardner 1980; Hein & Scott 1988, from memory).
 const COMFORTABLE_RATIO: f64 = 20.0;
+/// Phase margin above which such a ratio leaves no doubt \[deg\].
+const COMFORTABLE_MARGIN_DEG: f64 = 25.0;
 /// Points of the scan for peak and 3 dB frequency, log-spaced.
 const SCAN_POINTS: usize = 160;
 
@@ -97,7 +100,8 @@ impl LoopResponse {
     /// Returns the response of a filter network at one channel.
     ///
     /// # Errors
-    /// `NotPositive` for a point that is not; `Unstable` where A*(f_pfd/2) ≤ −1.
+    /// `NotPositive` for a point that is not; `Unstable` where A*(f_pfd/2) ≤ −1, `Grows` where other poles
+    /// lie outside the unit circle.
     pub fn new(network: &FilterNetwork, point: LoopPoint) -> Result<Self, LoopModelError> {
         for (what, found) in [
             ("the pump current", point.current_a),
@@ -126,8 +130,28 @@ impl LoopResponse {
         if edge.is_nan() || edge <= -1.0 {
             return Err(LoopModelError::Unstable { ratio: unity.map_or(f64::NAN, |f| point.pfd_hz / f), found: edge });
         }
+        response.check_growth()?;
         response.scan();
         Ok(response)
+    }
+
+    /// Refuses a loop with closed-loop poles outside the unit circle.
+    ///
+    /// The open-loop gain falls with frequency, so a loop with a comfortable margin and a PFD frequency far above its
+    /// bandwidth is stable without counting: sampling takes 180°·f_c/f_pfd, at most 9°.
+    fn check_growth(&self) -> Result<(), LoopModelError> {
+        let Form::Network(terms) = &self.form else { return Ok(()) };
+        let ratio = self.unity_gain_hz.map_or(f64::NAN, |unity| self.pfd_hz / unity);
+        let margin_deg = self.phase_margin_deg.unwrap_or(f64::NAN);
+        if ratio >= COMFORTABLE_RATIO && margin_deg >= COMFORTABLE_MARGIN_DEG {
+            return Ok(());
+        }
+        let decays: Vec<f64> = terms.poles.iter().map(|(rate, _)| (-rate / self.pfd_hz).exp()).collect();
+        let sampled = |angle: f64| terms.sampled(Complex64::new(0.0, angle * self.pfd_hz), self.pfd_hz);
+        match poles_outside(&decays, sampled) {
+            0 => Ok(()),
+            poles => Err(LoopModelError::Grows { ratio, margin_deg, poles }),
+        }
     }
 
     /// Returns a response from a measured closed-loop table: both parts linear in log f between the points, held

@@ -34,6 +34,20 @@ pub enum LoopModelError {
         /// The value.
         found_deg: f64,
     },
+    /// The sampled loop grows although its gain at half the PFD frequency does not tell.
+    #[error(
+        "the sampled loop is unstable: {poles} of its closed-loop poles lie outside the unit circle \
+         (PFD frequency over unity-gain frequency is {ratio:.2}, phase margin {margin_deg:.1} deg); \
+         lower the bandwidth, raise the PFD frequency or move the filter's zero and poles apart"
+    )]
+    Grows {
+        /// f_pfd/f_c.
+        ratio: f64,
+        /// Margin of the unsampled loop \[deg\].
+        margin_deg: f64,
+        /// Poles outside.
+        poles: usize,
+    },
     /// The sampled loop is unstable.
     #[error(
         "the sampled loop is unstable: open-loop gain {found:.3} at half the PFD frequency is not above -1 \

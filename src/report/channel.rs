@@ -5,6 +5,7 @@ use serde::Serialize;
 use super::ReportError;
 use super::json::json_text;
 use crate::assess::{ChannelResult, SpectrumView, Tone};
+use crate::base::{Assumption, Basis};
 use crate::plan::Plan;
 
 /// The spectrum part of `channel --json`.
@@ -19,16 +20,21 @@ struct ChannelSpectrum<'a> {
 ///
 /// # Errors
 /// `NotFinite` with the key of a NaN or an infinity; `Serialize` for what JSON cannot express.
-pub fn channel_json(channel: &ChannelResult, view: Option<&SpectrumView>) -> Result<String, ReportError> {
+pub fn channel_json(
+    channel: &ChannelResult,
+    view: Option<&SpectrumView>,
+    assumptions: &[Assumption],
+) -> Result<String, ReportError> {
     let spectrum = view.map(|view| ChannelSpectrum {
         offset_hz: &view.offset_hz,
         modulator_dbc_per_hz: &view.modulator_dbc_per_hz,
         total_dbc_per_hz: &view.total_dbc_per_hz,
     });
     Ok(format!(
-        "{{\n\"schema\": \"thornmap.channel/1\",\n\"channel\": {},\n\"spectrum\": {}\n}}\n",
+        "{{\n\"schema\": \"thornmap.channel/1\",\n\"channel\": {},\n\"spectrum\": {},\n\"assumptions\": {}\n}}\n",
         json_text("channel", channel)?,
-        json_text("spectrum", &spectrum)?
+        json_text("spectrum", &spectrum)?,
+        json_text("assumptions", assumptions)?
     ))
 }
 
@@ -44,7 +50,7 @@ fn whole(value: Option<u64>) -> String {
 
 /// Returns everything about a channel as text, verdict first, then its proof.
 #[must_use]
-pub fn channel_text(plan: &Plan, channel: &ChannelResult) -> String {
+pub fn channel_text(plan: &Plan, channel: &ChannelResult, assumptions: &[Assumption]) -> String {
     let mut text = format!(
         "{}, group \"{}\": channel {}, output {}\nverdict: {}\n",
         plan.identity.title,
@@ -65,8 +71,8 @@ pub fn channel_text(plan: &Plan, channel: &ChannelResult) -> String {
     text.push_str(&tone_lines(channel));
     text.push_str(&noise_lines(channel));
     text.push_str("\nassumed, not given by the plan:\n");
-    for assumption in plan.assumptions.iter().filter(|a| a.basis == crate::base::Basis::Default) {
-        text.push_str(&format!("  {} = {}\n", assumption.key, assumption.value));
+    for assumption in assumptions.iter().filter(|a| matches!(a.basis, Basis::Default | Basis::Extrapolated)) {
+        text.push_str(&format!("  {} = {} ({})\n", assumption.key, assumption.value, assumption.basis.word()));
     }
     text.push_str(
         "\nLevels are predictions in dBc at the output, one sideband; they are no compliance measurement. Transmitting\n\

@@ -406,3 +406,38 @@ fn a_whole_noise_plan_equals_an_independent_script() {
     assert!(partial.total().is_none());
     assert_eq!(partial.unknown, ["oscillator"]);
 }
+
+#[test]
+fn stability_agrees_with_the_roots_of_the_characteristic_polynomial() {
+    // tests/data/stability_reference.py: numpy's roots of D(z)·(1 + A*(z)).
+    let path = concat!(env!("CARGO_MANIFEST_DIR"), "/tests/data/stability_reference.json");
+    let data: serde_json::Value = serde_json::from_str(&std::fs::read_to_string(path).unwrap()).unwrap();
+    let mut kinds = std::collections::BTreeMap::new();
+    for case in data["cases"].as_array().unwrap() {
+        let number = |value: &serde_json::Value| value.as_f64().unwrap();
+        let c = &case["components"];
+        let ladder: Vec<(f64, f64)> =
+            c["ladder"].as_array().unwrap().iter().map(|rc| (number(&rc[0]), number(&rc[1]))).collect();
+        let components = FilterComponents {
+            c1_farad: Some(number(&c["c1"])),
+            r2_ohm: number(&c["r2"]),
+            c2_farad: number(&c["c2"]),
+            r3_c3: ladder.first().copied(),
+            r4_c4: ladder.get(1).copied(),
+        };
+        let [current_a, gain_hz_per_v, divider, pfd_hz] = [0, 1, 2, 3].map(|i| number(&case["point"][i]));
+        let network = FilterNetwork::new(&components).unwrap();
+        let found = LoopResponse::new(&network, LoopPoint { current_a, gain_hz_per_v, divider, pfd_hz });
+        let outside = usize::try_from(case["outside"].as_u64().unwrap()).unwrap();
+        match (case["kind"].as_str().unwrap(), found) {
+            ("stable", Ok(_)) => {}
+            ("edge", Err(LoopModelError::Unstable { found, .. })) => {
+                close(found / number(&case["edge"]), 1.0, 1e-6);
+            }
+            ("hidden", Err(LoopModelError::Grows { poles, .. })) => assert_eq!(poles, outside),
+            (kind, found) => panic!("{kind}, {outside} outside: {found:?}\n{case}"),
+        }
+        *kinds.entry(case["kind"].as_str().unwrap().to_owned()).or_insert(0) += 1;
+    }
+    assert_eq!(kinds.into_values().collect::<Vec<_>>(), [25, 20, 35]);
+}

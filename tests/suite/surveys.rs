@@ -185,3 +185,31 @@ record = {record}
     let difference = (first(&exact).0 - first(&curve).0).abs();
     assert!(difference <= first(&curve).1 + 0.05, "{difference} dB");
 }
+
+#[test]
+fn noise_carried_beyond_its_points_is_listed_and_unused_figures_are_said() {
+    let text = std::fs::read_to_string(concat!(env!("CARGO_MANIFEST_DIR"), "/configs/demo.toml")).unwrap();
+    let text = text.replace(
+        "current = \"2.5 mA\"",
+        "current = \"2.5 mA\"\nreset_delay = \"500 ps\"\npump_noise = \"20 pA/sqrt(Hz)\"",
+    );
+    let plan = thornmap::plan::parse_plan(&text, "demo", &|_| Err("none".to_owned())).unwrap();
+    let setup = thornmap::assess::Setup::new(&plan).unwrap();
+    let carried: Vec<String> = setup
+        .assumptions()
+        .into_iter()
+        .filter(|assumption| assumption.basis == thornmap::base::Basis::Extrapolated)
+        .map(|assumption| format!("{}: {}", assumption.key, assumption.value))
+        .collect();
+    // Integrated from 100 Hz to 9.6 MHz; the reference's points end at 10 kHz, the VCO's run from 1 kHz to 1 MHz.
+    assert_eq!(
+        carried,
+        [
+            "reference.noise: carried from 10 kHz to 9.6 MHz by flat",
+            "oscillator.noise: carried from 100 Hz to 1 kHz by the first segment's slope, at least -30 dB a decade",
+            "oscillator.noise: carried from 1 MHz to 9.6 MHz by -20 dB a decade",
+        ]
+    );
+    assert!(setup.warnings().iter().any(|text| text.contains("detector.pump_noise is not added")));
+    assert!(setup.warnings().iter().any(|text| text.contains("detector.reset_delay enters no prediction")));
+}
