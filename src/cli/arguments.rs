@@ -27,6 +27,8 @@ pub enum Command {
     Compare(CompareArguments),
     /// Rank the mechanisms that put a tone at an offset, and name the experiment that tells them apart
     Identify(IdentifyArguments),
+    /// Write words, avoided ranges and driver test vectors for firmware
+    Export(ExportArguments),
     /// Validate a plan and say what it holds
     Check(PlanArgument),
     /// Print a commented starter plan
@@ -172,4 +174,41 @@ pub struct CompareArguments {
     #[command(flatten)]
     #[allow(missing_docs, reason = "clap shows the options of the group itself")]
     pub common: CommonOptions,
+}
+
+/// Formats of `export`.
+#[derive(Debug, Clone, Copy, PartialEq, Eq, ValueEnum)]
+pub enum ExportFormat {
+    /// A C99 header with static const arrays
+    CHeader,
+    /// One CSV table
+    Csv,
+    /// JSON
+    Json,
+}
+
+/// Arguments of `export`.
+#[derive(Debug, Args)]
+pub struct ExportArguments {
+    /// Plan file (TOML)
+    #[arg(value_name = "PLAN", value_hint = ValueHint::FilePath)]
+    pub plan: PathBuf,
+    /// Format
+    #[arg(long = "as", value_name = "FORMAT")]
+    pub format: ExportFormat,
+    /// File to write [default: standard output]
+    #[arg(long, value_name = "FILE", value_hint = ValueHint::FilePath)]
+    pub out: Option<PathBuf>,
+    /// Register map of your own (TOML: [[register]] name, width, address, base; [[field]] name, register, msb, lsb, low)
+    #[arg(long, value_name = "BITS.toml", value_hint = ValueHint::FilePath)]
+    pub map: Option<PathBuf>,
+    /// One channel group only
+    #[arg(long, value_name = "NAME")]
+    pub group: Option<String>,
+    /// Threads to use [default: all cores]
+    #[arg(long, value_name = "N", value_parser = clap::value_parser!(u16).range(1..=1024))]
+    pub jobs: Option<u16>,
+    /// No messages on standard error unless something fails
+    #[arg(long, short)]
+    pub quiet: bool,
 }

@@ -1,4 +1,5 @@
 //! What follows from the stages before: which cause, which choice, which cure.
 
 pub mod compare;
+pub mod export;
 pub mod identify;

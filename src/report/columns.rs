@@ -144,7 +144,7 @@ columns! {
 }
 
 /// Returns text that no spreadsheet takes for a formula.
-fn inert(text: String) -> String {
+pub(crate) fn inert(text: String) -> String {
     match text.chars().next() {
         Some('=' | '+' | '-' | '@' | '\t' | '\r' | '\n' | '＝' | '＋' | '－' | '＠') => format!("'{text}"),
         _ => text,
