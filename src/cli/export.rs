@@ -3,12 +3,14 @@
 use crate::decide::export::export;
 use crate::plan::{RegisterMapError, read_register_map};
 use crate::report::{FirmwareFormat, firmware_bytes, write_file};
+use crate::survey::survey;
 
 use super::arguments::{ExportArguments, ExportFormat};
 use super::failure::Failure;
 use super::output::{self, Voice};
 use super::plan_file;
-use super::survey::{in_pool, report_failure};
+use super::progress::Bar;
+use super::survey::{assess_failure, in_pool, report_failure};
 
 /// Runs `export`.
 ///
@@ -20,7 +22,12 @@ pub fn run(arguments: &ExportArguments) -> Result<(), Failure> {
         RegisterMapError::Io(_) => Failure::InputOutput(format!("error: {error}")),
         RegisterMapError::Content { .. } => Failure::Content(format!("error: register map:\n{error}")),
     })?;
-    let found = in_pool(arguments.jobs, || export(&plan, arguments.group.as_deref(), map.as_ref()))?
+    let voice = Voice::from_quiet(arguments.quiet);
+    let bar = Bar::new(plan.groups.iter().map(|group| group.channels.len()).sum(), "channels", voice);
+    let result = in_pool(arguments.jobs, || survey(&plan, &|items| bar.advance(items)))?
+        .map_err(|error| assess_failure(&plan, &error))?;
+    bar.finish();
+    let found = export(&result, arguments.group.as_deref(), map.as_ref())
         .map_err(|error| Failure::Content(format!("error: plan \"{}\": {error}", plan.identity.title)))?;
     let format = match arguments.format {
         ExportFormat::CHeader => FirmwareFormat::CHeader,
@@ -32,7 +39,7 @@ pub fn run(arguments: &ExportArguments) -> Result<(), Failure> {
         Some(path) => {
             write_file(path, &bytes).map_err(report_failure)?;
             let legal = found.channels.iter().filter(|channel| channel.legal).count();
-            Voice::from_quiet(arguments.quiet).say(&format!(
+            voice.say(&format!(
                 "{}: {legal} of {} channels with a word, {} avoided ranges, {} test vectors; in {}",
                 plan.identity.title,
                 found.channels.len(),

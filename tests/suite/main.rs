@@ -4,6 +4,7 @@
 
 mod cli;
 mod examples;
+mod exports;
 mod identifications;
 mod loops;
 mod modulators;

@@ -16,7 +16,7 @@ use crate::assess::AssessError;
 use crate::base::Frequency;
 use crate::modulator::ModulusRule;
 use crate::plan::{Plan, RegisterMap};
-use crate::survey::survey;
+use crate::survey::SurveyResult;
 
 /// Name and number of the layout; a renamed or re-unitised key raises the number.
 pub const SCHEMA: &str = "thornmap.export/1";
@@ -64,7 +64,7 @@ pub struct Export {
 /// Why there is nothing to export.
 #[derive(Debug, thiserror::Error)]
 pub enum ExportError {
-    /// The plan cannot be surveyed.
+    /// A channel cannot be placed.
     #[error(transparent)]
     Assess(#[from] AssessError),
     /// No group of that name.
@@ -83,18 +83,18 @@ pub enum ExportError {
     },
 }
 
-/// Returns the export of a plan, or of one of its groups, with register values where a map is given.
+/// Returns the export of a surveyed plan, or of one of its groups, with register values where a map is given.
 ///
 /// # Errors
-/// `NoSuchGroup`, `Map` with every word that a map does not hold, `Assess` when the plan cannot be surveyed.
-pub fn export(plan: &Plan, group: Option<&str>, map: Option<&RegisterMap>) -> Result<Export, ExportError> {
+/// `NoSuchGroup`, `Map` with every word that a map does not hold, `Assess` where exact arithmetic has no result.
+pub fn export(result: &SurveyResult, group: Option<&str>, map: Option<&RegisterMap>) -> Result<Export, ExportError> {
+    let plan = &result.plan;
     if let Some(name) = group
         && !plan.groups.iter().any(|known| known.name == name)
     {
         let known: Vec<String> = plan.groups.iter().map(|known| format!("\"{}\"", known.name)).collect();
         return Err(ExportError::NoSuchGroup { found: name.to_owned(), known: known.join(", ") });
     }
-    let result = survey(plan, &|_| {})?;
     let wanted = |name: &str| group.is_none_or(|group| group == name);
     let judged: Vec<_> = result.channels.iter().filter(|channel| wanted(&channel.group)).collect();
     let channels = judged
@@ -125,7 +125,7 @@ pub fn export(plan: &Plan, group: Option<&str>, map: Option<&RegisterMap>) -> Re
         vectors,
         vectors_missing: missing,
         registers,
-        assumptions: result.assumptions,
+        assumptions: result.assumptions.clone(),
     })
 }
 
