@@ -29,6 +29,8 @@ pub enum Command {
     Identify(IdentifyArguments),
     /// Write words, avoided ranges and driver test vectors for firmware
     Export(ExportArguments),
+    /// Show what changed between two surveys, and which inputs changed with it
+    Diff(DiffArguments),
     /// Validate a plan and say what it holds
     Check(PlanArgument),
     /// Print a commented starter plan
@@ -208,6 +210,29 @@ pub struct ExportArguments {
     /// Threads to use [default: all cores]
     #[arg(long, value_name = "N", value_parser = clap::value_parser!(u16).range(1..=1024))]
     pub jobs: Option<u16>,
+    /// No messages on standard error unless something fails
+    #[arg(long, short)]
+    pub quiet: bool,
+}
+
+/// Arguments of `diff`.
+#[derive(Debug, Args)]
+pub struct DiffArguments {
+    /// The survey.json before
+    #[arg(value_name = "OLD.json", value_hint = ValueHint::FilePath)]
+    pub old: PathBuf,
+    /// The survey.json after
+    #[arg(value_name = "NEW.json", value_hint = ValueHint::FilePath)]
+    pub new: PathBuf,
+    /// Print the result as JSON
+    #[arg(long)]
+    pub json: bool,
+    /// Write a page as well
+    #[arg(long, value_name = "FILE", value_hint = ValueHint::FilePath)]
+    pub html: Option<PathBuf>,
+    /// Exit with status 3 when a channel of both surveys got worse and is now bad, or marginal or worse
+    #[arg(long, value_name = "VERDICT")]
+    pub fail_on: Option<FailOn>,
     /// No messages on standard error unless something fails
     #[arg(long, short)]
     pub quiet: bool,

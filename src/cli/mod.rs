@@ -3,6 +3,7 @@
 mod arguments;
 mod channel;
 mod compare;
+mod diff;
 mod export;
 mod failure;
 mod identify;
@@ -40,6 +41,7 @@ fn dispatch(command: &Command) -> Result<(), Failure> {
         Command::Channel(arguments) => channel::run(arguments),
         Command::Compare(arguments) => compare::run(arguments),
         Command::Identify(arguments) => identify::run(arguments),
+        Command::Diff(arguments) => diff::run(arguments),
         Command::Export(arguments) => export::run(arguments),
         Command::Check(arguments) => plan_file::check(&arguments.plan),
         Command::Example => output::print(&crate::plan::example_plan()),

@@ -3,6 +3,7 @@
 mod channel;
 mod columns;
 mod comparison;
+mod difference;
 mod document;
 mod error;
 mod figures;
@@ -22,6 +23,7 @@ mod write;
 pub use channel::{channel_json, channel_text};
 pub use columns::{COLUMNS, Cell, Column, channels_csv};
 pub use comparison::{comparison_files, comparison_json, comparison_text};
+pub use difference::{difference_html, difference_json, difference_text};
 pub use error::ReportError;
 pub use firmware::{FirmwareFormat, firmware_bytes};
 pub use identification::{identification_json, identification_text};
