@@ -42,6 +42,12 @@ pub fn write_file(path: &Path, bytes: &[u8]) -> Result<(), ReportError> {
 /// # Errors
 /// `Io` where the system refuses, for a folder and for more than 4 GiB.
 pub fn read_file(path: &Path) -> Result<Vec<u8>, ReportError> {
+    let refused = |path: &Path, action, source| ReportError::Io {
+        path: path.to_owned(),
+        action,
+        kept: "nothing was written",
+        source,
+    };
     let size = fs::metadata(path).map_err(|source| refused(path, "read", source))?.len();
     if size > LARGEST_INPUT {
         return Err(refused(path, "read", io::Error::new(io::ErrorKind::FileTooLarge, "more than 4 GiB")));

@@ -3,6 +3,7 @@
 #![allow(clippy::unwrap_used, reason = "a test fails by panicking")]
 
 mod cli;
+mod diffs;
 mod examples;
 mod exports;
 mod identifications;
