@@ -27,6 +27,8 @@ pub enum Command {
     Compare(CompareArguments),
     /// Rank the mechanisms that put a tone at an offset, and name the experiment that tells them apart
     Identify(IdentifyArguments),
+    /// List the fewest channels to measure that show everything the verdicts rely on
+    Measure(MeasureArguments),
     /// Write words, avoided ranges and driver test vectors for firmware
     Export(ExportArguments),
     /// Show what changed between two surveys, and which inputs changed with it
@@ -236,4 +238,30 @@ pub struct DiffArguments {
     /// No messages on standard error unless something fails
     #[arg(long, short)]
     pub quiet: bool,
+}
+
+/// What `measure` counts as one boundary class.
+#[derive(Debug, Clone, Copy, PartialEq, Eq, ValueEnum)]
+pub enum ClassChoice {
+    /// Each fraction p/q
+    Fraction,
+    /// Each denominator q: fewer channels on a wide plan
+    Denominator,
+}
+
+/// Arguments of `measure`.
+#[derive(Debug, Args)]
+pub struct MeasureArguments {
+    /// Plan file (TOML)
+    #[arg(value_name = "PLAN", value_hint = ValueHint::FilePath)]
+    pub plan: PathBuf,
+    /// What counts as one boundary class
+    #[arg(long, value_name = "CLASS", default_value = "fraction")]
+    pub each: ClassChoice,
+    /// Folder for measure.html, measure.csv and measure.json [default: reports/<plan stem>]
+    #[arg(long, value_name = "DIR", value_hint = ValueHint::DirPath)]
+    pub out: Option<PathBuf>,
+    #[command(flatten)]
+    #[allow(missing_docs, reason = "clap shows the options of the group itself")]
+    pub common: CommonOptions,
 }

@@ -4,3 +4,4 @@ pub mod compare;
 pub mod diff;
 pub mod export;
 pub mod identify;
+pub mod measure_list;
