@@ -8,6 +8,7 @@ mod examples;
 mod exports;
 mod identifications;
 mod loops;
+mod measurements;
 mod modulators;
 mod outside;
 mod plans;
