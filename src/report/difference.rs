@@ -97,10 +97,13 @@ fn tone_sentence(tone: &ToneChange) -> String {
         "appeared" => format!("appeared at {}", level(tone.new_level_dbc)),
         "gone" => format!("gone, was {}", level(tone.old_level_dbc)),
         "known part" => "level unknown, its known part changed".to_owned(),
+        "level" => format!("{} → {}", level(tone.old_level_dbc), level(tone.new_level_dbc)),
         other => format!("{other}: {} → {}", level(tone.old_level_dbc), level(tone.new_level_dbc)),
     };
     let by = tone.change_db.map_or_else(String::new, |db| format!(" ({} dB)", decibel(db)));
-    format!("{} {} at {at}: {what}{by}", tone.origin, tone.label)
+    let name =
+        if tone.label.contains(&tone.origin) { tone.label.clone() } else { format!("{} {}", tone.origin, tone.label) };
+    format!("{name} at {at}: {what}{by}")
 }
 
 fn word_sentence(change: &ChannelChange) -> String {
@@ -211,6 +214,8 @@ struct Page<'a> {
     warnings: &'a [String],
     inputs: Vec<String>,
     rows: Vec<Row>,
+    any_rule: bool,
+    any_word: bool,
     more: usize,
     lone: Vec<String>,
     conventions: &'a [&'static str],
@@ -244,7 +249,10 @@ pub fn difference_html(difference: &Difference) -> Result<String, ReportError> {
             })
         })
         .collect();
+    let rows: Vec<Row> = ranked(difference).into_iter().take(PAGE_CHANNELS).map(row).collect();
     let page = Page {
+        any_rule: rows.iter().any(|row| !row.reasons.is_empty()),
+        any_word: rows.iter().any(|row| !row.word.is_empty()),
         policy: policy(&css),
         title: &difference.new.title,
         counts: counts_sentence(difference),
@@ -252,7 +260,7 @@ pub fn difference_html(difference: &Difference) -> Result<String, ReportError> {
         sides: [side_line("Old", &difference.old), side_line("New", &difference.new)],
         warnings: &difference.warnings,
         inputs: difference.inputs.iter().flat_map(input_lines).collect(),
-        rows: ranked(difference).into_iter().take(PAGE_CHANNELS).map(row).collect(),
+        rows,
         more: difference.channels.len().saturating_sub(PAGE_CHANNELS),
         lone,
         conventions: &difference.conventions,

@@ -40,6 +40,19 @@ fn expectation(line: &Line) -> String {
     }
 }
 
+/// Returns a remark where the channel's own noise comes close to the tone or hides it; empty otherwise.
+fn own_noise(line: &Line) -> String {
+    match (line.in_own_noise, line.own_noise_dbc) {
+        (Some(true), Some(noise)) => {
+            format!(
+                "; in the channel's own noise ({} in this RBW): an upper bound is all there is to read",
+                level(Some(noise))
+            )
+        }
+        _ => String::new(),
+    }
+}
+
 /// Returns the length of the list in one sentence.
 fn length(list: &MeasureList) -> String {
     let proof = if list.proven_shortest {
@@ -89,7 +102,7 @@ pub fn measure_text(list: &MeasureList) -> String {
         ));
         for line in &channel.lines {
             text.push_str(&format!(
-                "    {} at {}: {}, limit {}; span {}, RBW {}, floor {}\n",
+                "    {} at {}: {}, limit {}; span {}, RBW {}, floor {}{}\n",
                 line.label,
                 with_prefix(line.offset_hz, "Hz", 8),
                 expectation(line),
@@ -97,7 +110,8 @@ pub fn measure_text(list: &MeasureList) -> String {
                 with_prefix(line.span_hz, "Hz", 4),
                 with_prefix(line.rbw_hz, "Hz", 4),
                 line.floor_dbc_per_hz
-                    .map_or_else(|| "unknown".to_owned(), |floor| format!("{} dBc/Hz", decibel(floor)))
+                    .map_or_else(|| "unknown".to_owned(), |floor| format!("{} dBc/Hz", decibel(floor))),
+                own_noise(line)
             ));
         }
         for need in &channel.shows {
@@ -132,7 +146,7 @@ fn measure_csv(list: &MeasureList) -> Result<Vec<u8>, ReportError> {
                 typed_hz("offset_hz", line.offset_hz)?,
                 String::new(),
                 typed_hz("rbw_hz", line.rbw_hz)?,
-                inert(format!("{}, {}", line.label, expectation(line))),
+                inert(format!("{}, {}{}", line.label, expectation(line), own_noise(line))),
                 inert(channel.group.clone()),
             ])?;
         }
@@ -146,9 +160,8 @@ struct Row {
     group: String,
     output: String,
     verdict: &'static str,
-    word: String,
     label: String,
-    cells: [String; 6],
+    cells: [String; 7],
 }
 
 #[derive(Template)]
@@ -175,7 +188,6 @@ fn row(channel: &MeasureChannel, line: &Line) -> Row {
         group: channel.group.clone(),
         output: with_prefix(channel.output_hz, "Hz", 10),
         verdict: channel.verdict.word(),
-        word: word_line(channel),
         label: line.label.clone(),
         cells: [
             with_prefix(line.offset_hz, "Hz", 8),
@@ -183,6 +195,7 @@ fn row(channel: &MeasureChannel, line: &Line) -> Row {
             dash(line.limit_dbc),
             with_prefix(line.span_hz, "Hz", 4),
             with_prefix(line.rbw_hz, "Hz", 4),
+            dash(line.own_noise_dbc),
             dash(line.floor_dbc_per_hz),
         ],
     }
@@ -204,7 +217,7 @@ fn page(list: &MeasureList) -> Result<String, ReportError> {
             .channels
             .iter()
             .map(|channel| {
-                let head = format!("{} ({})", channel.channel, channel.group);
+                let head = format!("{} ({}): {}", channel.channel, channel.group, word_line(channel));
                 (head, channel.shows.iter().map(|need| need.text.clone()).collect())
             })
             .collect(),

@@ -3,10 +3,15 @@
 use serde::Serialize;
 
 use crate::assess::ChannelResult;
-use crate::base::db_from_power;
+use crate::base::{db_from_power, power_from_db};
 
 /// Share of the distance to the next tone that the resolution bandwidth may take.
 const BANDWIDTH_SHARE: f64 = 0.1;
+/// Widest resolution bandwidth that is proposed \[Hz\].
+const WIDEST_HZ: f64 = 1e4;
+/// Narrowest resolution bandwidth that is proposed for the sake of noise; a close tone may ask for a narrower one
+/// \[Hz\].
+const NARROWEST_HZ: f64 = 1.0;
 /// How far below the tone the instrument's floor must lie for an error below half a decibel \[dB\].
 const FLOOR_BELOW_DB: f64 = 10.0;
 /// Span in tone offsets: both sidebands with room beside them.
@@ -31,6 +36,11 @@ pub struct Line {
     pub distance_hz: f64,
     /// Resolution bandwidth, at most a tenth of the distance \[Hz\].
     pub rbw_hz: f64,
+    /// The channel's own phase noise in that bandwidth \[dBc\]; `None` where a source of noise is unknown.
+    pub own_noise_dbc: Option<f64>,
+    /// The channel's own noise in that bandwidth is less than 10 dB below the expected level: the reading is of noise
+    /// too; `None` where either is unknown.
+    pub in_own_noise: Option<bool>,
     /// Span around the carrier \[Hz\].
     pub span_hz: f64,
     /// Floor that the instrument needs, 10 dB below the smaller of expected level and limit \[dBc/Hz\]; `None` where
@@ -38,9 +48,9 @@ pub struct Line {
     pub floor_dbc_per_hz: Option<f64>,
 }
 
-/// Returns the line at an offset of a channel.
+/// Returns the line at an offset of a channel; `noise_dbc_per_hz` is the channel's own phase noise there.
 #[must_use]
-pub fn line_at(channel: &ChannelResult, offset_hz: f64, label: &str) -> Line {
+pub fn line_at(channel: &ChannelResult, offset_hz: f64, label: &str, noise_dbc_per_hz: Option<f64>) -> Line {
     let same = |other: f64| (other - offset_hz).abs() <= 1e-9 * offset_hz.max(1.0);
     let tone = channel.tones.iter().find(|tone| same(tone.offset_hz));
     let gap_hz = channel
@@ -49,10 +59,11 @@ pub fn line_at(channel: &ChannelResult, offset_hz: f64, label: &str) -> Line {
         .filter(|other| !same(other.offset_hz))
         .map(|other| (other.offset_hz - offset_hz).abs())
         .fold(offset_hz, f64::min);
-    let rbw_hz = step_down(gap_hz * BANDWIDTH_SHARE);
     let expected_dbc = tone.and_then(|tone| tone.level_dbc);
     let limit_dbc = tone.and_then(|tone| tone.limit_dbc);
     let weakest = [expected_dbc, limit_dbc].into_iter().flatten().reduce(f64::min);
+    let rbw_hz = resolution_hz(gap_hz, weakest.zip(noise_dbc_per_hz));
+    let own_noise_dbc = noise_dbc_per_hz.map(|density| density + db_from_power(rbw_hz));
     let unknown = match tone {
         None => "below the plan's tone floor or beyond its span".to_owned(),
         Some(tone) if tone.level_dbc.is_none() => tone.unknown.join(", "),
@@ -67,8 +78,23 @@ pub fn line_at(channel: &ChannelResult, offset_hz: f64, label: &str) -> Line {
         limit_dbc,
         distance_hz: gap_hz,
         rbw_hz,
+        own_noise_dbc,
+        in_own_noise: own_noise_dbc.zip(expected_dbc).map(|(noise, level)| noise > level - FLOOR_BELOW_DB),
         span_hz: step_up(SPAN_OFFSETS * offset_hz),
         floor_dbc_per_hz: weakest.map(|level| level - FLOOR_BELOW_DB - db_from_power(rbw_hz)),
+    }
+}
+
+/// Returns the resolution bandwidth for a distance, narrowed so that the channel's own noise \[dBc/Hz\] stays 10 dB below
+/// the weakest level of interest \[dBc\], but not below `NARROWEST_HZ` for that.
+fn resolution_hz(distance_hz: f64, weakest_and_noise: Option<(f64, f64)>) -> f64 {
+    let by_distance = step_down((distance_hz * BANDWIDTH_SHARE).min(WIDEST_HZ));
+    match weakest_and_noise {
+        Some((weakest, noise)) => {
+            let by_noise = step_down(power_from_db(weakest - FLOOR_BELOW_DB - noise)).max(NARROWEST_HZ);
+            by_distance.min(by_noise)
+        }
+        None => by_distance,
     }
 }
 

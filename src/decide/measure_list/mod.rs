@@ -10,9 +10,10 @@ pub use needs::{ABOUT_RATIO, Classes, DISTANCES, Demand, Distance, Meeting, Need
 
 use std::collections::BTreeMap;
 
+use rayon::prelude::*;
 use serde::Serialize;
 
-use crate::assess::{AssessError, ChannelResult, Rule, Verdict};
+use crate::assess::{AssessError, ChannelResult, Rule, Setup, Verdict};
 use crate::base::{Assumption, Frequency};
 use crate::plan::Plan;
 use crate::survey::SurveyResult;
@@ -23,7 +24,7 @@ pub const SCHEMA: &str = "thornmap.measurement/1";
 /// What must be read before anything is switched on.
 pub const CAUTIONS: [&str; 5] = [
     "transmit only into a load or with a licence; your local rules decide",
-    "know the power at the instrument before connecting: above its damage level it is destroyed, so put an attenuator in front and take its loss out of the level only if the carrier is not read through it as well",
+    "know the power at the instrument before connecting: above its damage level it is destroyed; use an attenuator or a coupler",
     "levels are relative to the carrier at the output in dBc, one sideband; read both sidebands, note the stronger one",
     "an instrument's own spurious responses look like tones: change its input attenuation, what changes with it is its own",
     "the list is a prediction's; it shows what the verdicts rely on and proves no compliance",
@@ -132,16 +133,17 @@ pub fn measure_list(result: &SurveyResult, classes: Classes) -> Result<MeasureLi
             first.entry(*need).or_insert(*chosen);
         }
     }
+    let setup = Setup::new(&result.plan)?;
     let channels = cover
         .chosen
-        .iter()
+        .par_iter()
         .map(|chosen| {
             let channel = &result.channels[demand.candidates[*chosen]];
             let met = &demand.met[*chosen];
             let own: Vec<usize> = met.keys().copied().filter(|need| first.get(need) == Some(chosen)).collect();
-            to_measure(&result.plan, channel, &demand.needs, met, &own)
+            to_measure(&setup, channel, &demand.needs, met, &own)
         })
-        .collect();
+        .collect::<Result<Vec<_>, AssessError>>()?;
     Ok(MeasureList {
         schema: SCHEMA,
         version: env!("CARGO_PKG_VERSION"),
@@ -163,12 +165,13 @@ pub fn measure_list(result: &SurveyResult, classes: Classes) -> Result<MeasureLi
 }
 
 fn to_measure(
-    plan: &Plan,
+    setup: &Setup,
     channel: &ChannelResult,
     needs: &[Need],
     met: &BTreeMap<usize, Option<Meeting>>,
     own: &[usize],
-) -> MeasureChannel {
+) -> Result<MeasureChannel, AssessError> {
+    let plan = setup.plan();
     let mut places: Vec<(f64, String)> = Vec::new();
     for need in own {
         match (&needs[*need], met.get(need).copied().flatten()) {
@@ -187,7 +190,9 @@ fn to_measure(
     }
     places.sort_by(|a, b| a.0.total_cmp(&b.0));
     places.dedup_by(|a, b| (a.0 - b.0).abs() <= 1e-9 * b.0);
-    MeasureChannel {
+    let offsets: Vec<f64> = places.iter().map(|(offset_hz, _)| *offset_hz).collect();
+    let noise = setup.noise_dbc_per_hz_at(channel, &offsets)?;
+    Ok(MeasureChannel {
         group: channel.group.clone(),
         index: channel.index,
         channel: channel.channel,
@@ -207,8 +212,12 @@ fn to_measure(
             .map(|need| NeedLine { need: needs[*need].clone(), text: words(plan, &needs[*need]) })
             .collect(),
         shows_again: met.len() - own.len(),
-        lines: places.into_iter().map(|(offset_hz, label)| line_at(channel, offset_hz, &label)).collect(),
-    }
+        lines: places
+            .iter()
+            .zip(noise)
+            .map(|((offset_hz, label), noise)| line_at(channel, *offset_hz, label, noise))
+            .collect(),
+    })
 }
 
 /// Returns a need in words.
@@ -227,7 +236,9 @@ fn words(plan: &Plan, need: &Need) -> String {
             format!("{family} boundary {fraction}, {distance} {side}")
         }
         Need::ExactInteger => "a channel exactly on an integer".to_owned(),
-        Need::CleanControl => "a clear channel with no boundary inside guard or loop (control)".to_owned(),
+        Need::CleanControl => {
+            "a clear channel, modulator running, no boundary inside guard or loop (control)".to_owned()
+        }
         Need::BandEdge { group, side } => {
             let edge = match side {
                 Side::Below => "lowest",
@@ -277,7 +288,7 @@ fn conventions(classes: Classes) -> Vec<String> {
         "a boundary is used where a channel's tone offset is within 17.8 loop bandwidths".to_owned(),
         "distances are tone offsets over the channel's own unity-gain frequency (closed-loop 3 dB frequency with a measured response); \"about\" is within a quarter of a decade, a factor of 1.78".to_owned(),
         "only the plan's own reference setting is listed: the verdicts rely on no other".to_owned(),
-        "resolution bandwidth is at most a tenth of the distance to the carrier and to the next listed tone; the floor needed lies 10 dB below the smaller of expected level and limit, in dBc/Hz".to_owned(),
+        "resolution bandwidth is at most a tenth of the distance to the carrier and to the next listed tone, at most 10 kHz, and narrower (down to 1 Hz) where the channel's own phase noise would come within 10 dB of the smaller of expected level and limit; the floor needed lies 10 dB below the smaller of expected level and limit, in dBc/Hz".to_owned(),
         "expected levels are one sideband in dBc at the output; empty is unknown".to_owned(),
     ]
 }

@@ -63,7 +63,7 @@ pub enum Need {
     },
     /// A channel exactly on an integer.
     ExactInteger,
-    /// A clear channel with no boundary inside guard or loop: what the board does by itself.
+    /// A clear channel with its modulator running and no boundary inside guard or loop: what the board does by itself.
     CleanControl,
     /// The lowest or highest channel of a group.
     BandEdge {
@@ -217,7 +217,9 @@ fn other_needs(result: &SurveyResult, channel: &ChannelResult) -> Vec<Need> {
     if channel.k == Some(0) {
         needs.push(Need::ExactInteger);
     }
-    if channel.verdict == Verdict::Clear && channel.boundaries.is_empty() {
+    // With an integer divider there is no modulator: any clear channel is the control then.
+    let is_running = channel.k != Some(0) || channel.order == 0;
+    if channel.verdict == Verdict::Clear && channel.boundaries.is_empty() && is_running {
         needs.push(Need::CleanControl);
     }
     if let Some((low, high)) = result.plan.groups[channel.group_index].channels.range() {
