@@ -29,7 +29,7 @@ pub fn firmware_bytes(export: &Export, format: FirmwareFormat) -> Result<Vec<u8>
 }
 
 /// Cells before the fields of the word.
-const HEAD: [&str; 12] = [
+const HEAD: [&str; 14] = [
     "row",
     "name",
     "group",
@@ -37,6 +37,8 @@ const HEAD: [&str; 12] = [
     "channel_hz",
     "channel_millihertz",
     "channel_exact",
+    "stop_hz",
+    "stop_millihertz",
     "stop_exact",
     "legal",
     "on_raster",
@@ -106,7 +108,11 @@ fn rows(export: &Export) -> Vec<Row> {
             head: head([
                 ("row", "avoided".to_owned()),
                 ("group", inert(range.group.clone())),
+                ("channel_hz", range.start_rounded.hz.to_string()),
+                ("channel_millihertz", range.start_rounded.millihertz.to_string()),
                 ("channel_exact", word(&range.start)),
+                ("stop_hz", range.stop_rounded.hz.to_string()),
+                ("stop_millihertz", range.stop_rounded.millihertz.to_string()),
                 ("stop_exact", word(&range.stop)),
                 ("verdict", "bad".to_owned()),
                 ("rules", range.rules.join(" ")),

@@ -1,7 +1,7 @@
 //! The words of a plan as a C99 header: static const arrays of integers, no floats.
 
 use super::columns::word;
-use crate::decide::export::{DriverWord, Export, ExportChannel, FIELDS, Field, RoundedHz, TestVector};
+use crate::decide::export::{DriverWord, Export, ExportChannel, FIELDS, Field, RoundedHz};
 
 /// Returns text that may stand inside a C comment: nothing in it ends, opens or splices a comment, and no character
 /// turns the reading direction.
@@ -121,7 +121,7 @@ pub(crate) fn c_header(export: &Export) -> String {
     ));
     for vector in &export.vectors {
         let row =
-            layout.row(group_index(export, vector), [vector.channel_rounded, vector.achieved_rounded], &vector.word);
+            layout.row(vector.group_index.to_string(), [vector.channel_rounded, vector.achieved_rounded], &vector.word);
         let mark = if vector.on_raster { "a channel of the plan" } else { "off the raster: arithmetic only" };
         let legal = if vector.legal { "" } else { ", not legal" };
         let text = format!("{}, exactly {}, {mark}{legal}", vector.name, word(&vector.channel));
@@ -131,12 +131,6 @@ pub(crate) fn c_header(export: &Export) -> String {
     out.push_str(&registers(export, &name, &upper));
     out.push_str(&format!("#endif /* {upper}_H */\n"));
     out
-}
-
-/// Returns the group index of a vector: its place among the groups of the channels.
-fn group_index(export: &Export, vector: &TestVector) -> String {
-    let found = export.channels.iter().find(|channel| channel.group == vector.group);
-    found.map_or_else(|| "0".to_owned(), |channel| channel.group_index.to_string())
 }
 
 /// Returns the end of an array; C knows no empty one, so that one row of zeros stands in where the count says 0.
@@ -201,9 +195,8 @@ fn structures(layout: &Layout, name: &str) -> String {
 fn avoided(export: &Export, name: &str) -> String {
     let mut out =
         format!("/* Contiguous runs of bad channels. */\nstatic const struct {name}_range {name}_avoided[] = {{\n");
-    let mut rows = 0;
     for range in &export.avoided {
-        let (Ok(start), Ok(stop)) = (RoundedHz::of(range.start), RoundedHz::of(range.stop)) else { continue };
+        let (start, stop) = (range.start_rounded, range.stop_rounded);
         out.push_str(&format!(
             "    {{ {}, {}, {}, {}, {}, {}, {} }},\n",
             range.group_index,
@@ -214,9 +207,8 @@ fn avoided(export: &Export, name: &str) -> String {
             range.channels,
             literal(&format!("{}: {}", range.rules.join(" "), range.reason))
         ));
-        rows += 1;
     }
-    out.push_str(&closed(rows, 7));
+    out.push_str(&closed(export.avoided.len(), 7));
     out
 }
 

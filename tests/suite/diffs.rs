@@ -247,11 +247,12 @@ fn other_files_are_refused_with_the_reason() {
         cuts += 1;
     }
     assert_eq!(cuts, 39);
-    let refusals: [(&[u8], &str); 8] = [
+    let refusals: [(&[u8], &str); 9] = [
         (b"", "is not JSON"),
         (b"schema = 1", "is not JSON"),
         (b"\xff\xfe", "not UTF-8"),
-        (b"[]", "it has no schema"),
+        (b"[]", "it is no JSON object"),
+        (b"{}", "it has no schema"),
         (b"{\"schema\": 1}", "its schema is 1"),
         (b"{\"schema\": \"thornmap.channel/1\"}", "its schema is \"thornmap.channel/1\""),
         (b"{\"schema\": \"thornmap.survey/1\"}", "missing field"),
@@ -267,7 +268,7 @@ fn other_files_are_refused_with_the_reason() {
         assert!(message.contains(want), "{message}");
         count += 1;
     }
-    assert_eq!(count, 8);
+    assert_eq!(count, 9);
 }
 
 #[test]

@@ -252,9 +252,18 @@ fn a_map_that_does_not_fit_is_refused_with_the_channel() {
         export(&DEMO, None, Some(&map)).unwrap_err().to_string()
     };
     let narrow = MAP.replace("msb = 43", "msb = 18");
-    // K = M − 1 needs 24 bits; the map holds 4 + 19.
+    // The largest K of a channel needs 24 bits; the map holds 4 + 19.
     let message = refused(&narrow);
-    assert!(message.contains("\"k\" is too narrow") && message.contains("k = 16777215"), "{message}");
+    let largest = DEMO.channels.iter().rev().max_by_key(|channel| channel.k).unwrap();
+    let named = format!("channel {} of group \"{}\" needs k = {}", largest.channel, largest.group, largest.k.unwrap());
+    assert!(message.contains("\"k\" is too narrow") && message.contains(&named), "{message}");
+    // The one channel's K = 43691 fits 20 bits, the vector K = M − 1 does not: it is named.
+    let mut fits = demo_plan();
+    fits.groups[0].channels = ChannelList::List(vec![Frequency::from_whole_hz(433_112_500)]);
+    let result = survey(&fits, &|_| {}).unwrap();
+    let map = parse_register_map(&MAP.replace("msb = 43", "msb = 15")).unwrap();
+    let message = export(&result, Some("uplink"), Some(&map)).unwrap_err().to_string();
+    assert!(message.contains("test vector \"K = M - 1, one step below an integer\""), "{message}");
     let message = refused(&MAP.replace("msb = 23\nlsb = 8", "msb = 13\nlsb = 8"));
     assert!(message.contains("\"n\" is too narrow") && message.contains("n = 92"), "{message}");
     // 92 is first needed where N reaches 92, in the downlink group.

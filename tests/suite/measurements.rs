@@ -4,7 +4,7 @@ use std::collections::BTreeSet;
 use std::sync::LazyLock;
 
 use serde_json::Value;
-use thornmap::assess::Verdict;
+use thornmap::assess::{Setup, Verdict, spectrum_view};
 use thornmap::base::{Dimension, Frequency, parse_quantity};
 use thornmap::decide::measure_list::{Classes, DISTANCES, Distance, Need, Side, demand, measure_list, shortest_cover};
 use thornmap::plan::parse_plan;
@@ -48,6 +48,25 @@ spacing = "6.25 kHz"
 name = "few"
 list = ["400 MHz", "400.00625 MHz", "407.5125 MHz", "410 MHz", "410.00625 MHz", "430 MHz"]
 "#;
+
+/// The same plan with every source of noise given.
+const NOISE: &str = r#"
+[reference]
+noise = [["10 Hz", "-95 dBc/Hz"], ["1 kHz", "-145 dBc/Hz"]]
+[oscillator]
+noise = [["10 kHz", "-78 dBc/Hz"], ["1 MHz", "-118 dBc/Hz"]]
+[detector]
+floor = "-205 dBc/Hz"
+flicker = "-118 dBc/Hz"
+"#;
+
+/// Returns the plan with the keys of `NOISE` in their sections.
+fn with_noise() -> String {
+    NOISE.split("\n[").filter(|part| !part.trim().is_empty()).fold(PLAN.to_owned(), |plan, part| {
+        let (section, keys) = part.split_once("]\n").unwrap();
+        plan.replacen(&format!("[{section}]\n"), &format!("[{section}]\n{keys}\n"), 1)
+    })
+}
 
 static RESULT: LazyLock<SurveyResult> =
     LazyLock::new(|| survey(&parse_plan(PLAN, "bench", &|_| Err("none".to_owned())).unwrap(), &|_| {}).unwrap());
@@ -237,6 +256,42 @@ fn instruments_are_set_from_distance_level_and_limit() {
         }
     }
     assert!(lines >= 15 && levels >= 10 && floors >= levels, "{lines} {levels} {floors}");
+}
+
+#[test]
+fn the_own_noise_narrows_the_bandwidth_and_is_said() {
+    let result = survey(&parse_plan(&with_noise(), "bench", &|_| Err("none".to_owned())).unwrap(), &|_| {}).unwrap();
+    let list = measure_list(&result, Classes::Fraction).unwrap();
+    let quiet = measure_list(&RESULT, Classes::Fraction).unwrap();
+    assert!(quiet.channels.iter().flat_map(|c| &c.lines).all(|line| line.own_noise_dbc.is_none()), "noise unknown");
+    let setup = Setup::new(&result.plan).unwrap();
+    let (mut lines, mut narrowed, mut hidden) = (0, 0, 0);
+    for channel in &list.channels {
+        let view = spectrum_view(&setup, usize::from(channel.group == "few"), channel.channel, &mut setup.scratch());
+        let view = view.unwrap();
+        for line in &channel.lines {
+            let Some(noise) = line.own_noise_dbc else { continue };
+            let density = noise - 10.0 * line.rbw_hz.log10();
+            // Second route: the total of the plotted spectrum, which stands on its own grid of offsets.
+            if let Some(view) = &view
+                && let Some(at) =
+                    view.offset_hz.windows(2).position(|w| w[0] <= line.offset_hz && line.offset_hz < w[1])
+            {
+                let ends = [view.total_dbc_per_hz[at].unwrap(), view.total_dbc_per_hz[at + 1].unwrap()];
+                let (low, high) = (ends[0].min(ends[1]), ends[0].max(ends[1]));
+                assert!((low - 0.1..=high + 0.1).contains(&density), "{density} {low} {high}");
+                lines += 1;
+            }
+            let weakest = [line.expected_dbc, line.limit_dbc].into_iter().flatten().reduce(f64::min);
+            if let Some(weakest) = weakest {
+                assert!(noise <= weakest - 10.0 + 1e-9 || line.rbw_hz <= 1.0, "{noise} {weakest}");
+            }
+            narrowed += usize::from(line.rbw_hz < line.distance_hz / 35.0 && line.rbw_hz < 3000.0);
+            assert_eq!(line.in_own_noise, line.expected_dbc.map(|level| noise > level - 10.0));
+            hidden += usize::from(line.in_own_noise == Some(true));
+        }
+    }
+    assert!(lines >= 10 && narrowed >= 1 && hidden >= 1, "{lines} {narrowed} {hidden}");
 }
 
 #[test]

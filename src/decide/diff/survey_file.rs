@@ -102,9 +102,10 @@ pub enum SurveyFileError {
     },
 }
 
-/// The words that are compared, in order.
-const WORD_KEYS: [&str; 10] =
-    ["legal", "n", "k", "m", "output_divider", "reference_divider", "doubler", "structure", "order", "seeds"];
+#[derive(Deserialize)]
+struct Head {
+    schema: Option<Value>,
+}
 
 #[derive(Deserialize)]
 struct Document {
@@ -114,7 +115,7 @@ struct Document {
     #[serde(default)]
     channels_omitted: u64,
     assumptions: Vec<AssumptionEntry>,
-    channels: Vec<Value>,
+    channels: Vec<ChannelEntry>,
 }
 
 #[derive(Deserialize)]
@@ -130,6 +131,37 @@ struct ChannelEntry {
     verdict: String,
     reasons: Vec<ReasonEntry>,
     tones: Vec<ToneRecord>,
+    legal: Option<Value>,
+    n: Option<Value>,
+    k: Option<Value>,
+    m: Option<Value>,
+    output_divider: Option<Value>,
+    reference_divider: Option<Value>,
+    doubler: Option<Value>,
+    structure: Option<Value>,
+    order: Option<Value>,
+    seeds: Option<Value>,
+}
+
+impl ChannelEntry {
+    /// Returns what is programmed, in the order of survey.json; unknown and absent are `null`.
+    fn word(&self) -> Vec<(&'static str, String)> {
+        [
+            ("legal", &self.legal),
+            ("n", &self.n),
+            ("k", &self.k),
+            ("m", &self.m),
+            ("output_divider", &self.output_divider),
+            ("reference_divider", &self.reference_divider),
+            ("doubler", &self.doubler),
+            ("structure", &self.structure),
+            ("order", &self.order),
+            ("seeds", &self.seeds),
+        ]
+        .into_iter()
+        .map(|(key, value)| (key, value.as_ref().map_or_else(|| "null".to_owned(), Value::to_string)))
+        .collect()
+    }
 }
 
 #[derive(Deserialize)]
@@ -145,20 +177,24 @@ struct ReasonEntry {
 pub fn parse_survey(bytes: &[u8]) -> Result<SurveyFile, SurveyFileError> {
     let text = std::str::from_utf8(bytes)
         .map_err(|error| SurveyFileError::NotJson { found: format!("not UTF-8 text: {error}") })?;
-    let value: Value = serde_json::from_str(text.trim_start_matches('\u{feff}')).map_err(|error| {
+    let text = text.trim_start_matches('\u{feff}');
+    // The whole text is checked before anything is kept of it.
+    let head: Head = serde_json::from_str(text).map_err(|error| {
         if error.is_eof() && !text.trim().is_empty() {
             SurveyFileError::Truncated { line: error.line() }
+        } else if error.is_data() {
+            SurveyFileError::NotASurvey { found: "it is no JSON object with a schema".to_owned() }
         } else {
             SurveyFileError::NotJson { found: error.to_string() }
         }
     })?;
-    let schema = match value.get("schema") {
-        Some(Value::String(schema)) if schema.starts_with(LAYOUT) => schema.clone(),
+    let schema = match head.schema {
+        Some(Value::String(schema)) if schema.starts_with(LAYOUT) => schema,
         Some(other) => return Err(SurveyFileError::NotASurvey { found: format!("its schema is {other}") }),
         None => return Err(SurveyFileError::NotASurvey { found: "it has no schema".to_owned() }),
     };
     let malformed = |found: String| SurveyFileError::Malformed { schema: schema.clone(), found };
-    let document: Document = serde_json::from_value(value).map_err(|error| malformed(error.to_string()))?;
+    let document: Document = serde_json::from_str(text).map_err(|error| malformed(error.to_string()))?;
     let channels = document
         .channels
         .into_iter()
@@ -178,9 +214,8 @@ pub fn parse_survey(bytes: &[u8]) -> Result<SurveyFile, SurveyFileError> {
     })
 }
 
-fn channel(value: Value) -> Result<ChannelRecord, String> {
-    let word = WORD_KEYS.iter().filter_map(|key| Some((*key, value.get(*key)?.to_string()))).collect();
-    let entry: ChannelEntry = serde_json::from_value(value).map_err(|error| error.to_string())?;
+fn channel(entry: ChannelEntry) -> Result<ChannelRecord, String> {
+    let word = entry.word();
     let verdict = [Verdict::Clear, Verdict::Marginal, Verdict::Bad]
         .into_iter()
         .find(|verdict| verdict.word() == entry.verdict)

@@ -2,8 +2,10 @@
 
 use serde::Serialize;
 
-use crate::assess::{ChannelResult, Rule, Verdict};
+use crate::assess::{ChannelResult, PlacementError, Rule, Verdict};
 use crate::base::Frequency;
+
+use super::words::RoundedHz;
 
 /// A run of bad channels of one group with no other channel of the group between them.
 #[derive(Debug, Clone, PartialEq, Eq, Serialize)]
@@ -18,6 +20,10 @@ pub struct AvoidedRange {
     /// Highest channel of the run, inclusive.
     #[serde(rename = "stop_exact")]
     pub stop: Frequency,
+    /// `start` in integers.
+    pub start_rounded: RoundedHz,
+    /// `stop` in integers.
+    pub stop_rounded: RoundedHz,
     /// Channels in the run.
     pub channels: u64,
     /// Names of the rules that make them bad, in order.
@@ -27,8 +33,10 @@ pub struct AvoidedRange {
 }
 
 /// Returns the runs of bad channels, group by group, rising in frequency.
-#[must_use]
-pub fn avoided_ranges(channels: &[&ChannelResult]) -> Vec<AvoidedRange> {
+///
+/// # Errors
+/// `PlacementError::Exact` where a frequency cannot be rounded within 127 bits.
+pub fn avoided_ranges(channels: &[&ChannelResult]) -> Result<Vec<AvoidedRange>, PlacementError> {
     let mut sorted = channels.to_vec();
     sorted.sort_by_key(|channel| (channel.group_index, channel.channel, channel.index));
     sorted
@@ -38,20 +46,28 @@ pub fn avoided_ranges(channels: &[&ChannelResult]) -> Vec<AvoidedRange> {
         .collect()
 }
 
-fn range_of(run: &[&ChannelResult]) -> Option<AvoidedRange> {
+fn range_of(run: &[&ChannelResult]) -> Option<Result<AvoidedRange, PlacementError>> {
     let (first, last) = (run.first()?, run.last()?);
+    let rounded =
+        |channel: Frequency| RoundedHz::of(channel).map_err(|source| PlacementError::Exact { channel, source });
+    let (start_rounded, stop_rounded) = match (rounded(first.channel), rounded(last.channel)) {
+        (Ok(start), Ok(stop)) => (start, stop),
+        (Err(error), _) | (_, Err(error)) => return Some(Err(error)),
+    };
     let fired = |rule: &Rule| {
         rule.verdict() == Verdict::Bad
             && run.iter().any(|channel| channel.reasons.iter().any(|reason| reason.rule == *rule))
     };
     let rules: Vec<Rule> = Rule::ALL.into_iter().filter(fired).collect();
-    Some(AvoidedRange {
+    Some(Ok(AvoidedRange {
         group: first.group.clone(),
         group_index: first.group_index,
         start: first.channel,
         stop: last.channel,
+        start_rounded,
+        stop_rounded,
         channels: run.len() as u64,
         rules: rules.iter().map(|rule| rule.name()).collect(),
         reason: rules.iter().map(|rule| rule.sentence()).collect::<Vec<_>>().join("; "),
-    })
+    }))
 }

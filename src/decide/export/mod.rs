@@ -120,7 +120,7 @@ pub fn export(result: &SurveyResult, group: Option<&str>, map: Option<&RegisterM
         structure: plan.modulator.settings.structure.word(),
         rounding: rounding(plan),
         caution: CAUTION,
-        avoided: avoided_ranges(&judged),
+        avoided: avoided_ranges(&judged).map_err(AssessError::from)?,
         channels,
         vectors,
         vectors_missing: missing,

@@ -72,30 +72,28 @@ pub fn register_values(
             known: FIELDS.iter().map(|known| known.name).collect::<Vec<_>>().join(", "),
         })
         .collect();
-    let words: Vec<(String, &DriverWord)> = channels
+    let of_channels: Vec<(String, &DriverWord)> =
+        channels.iter().filter_map(|channel| Some((channel.place(), channel.word.as_ref()?))).collect();
+    let of_vectors: Vec<(String, &DriverWord)> = vectors
         .iter()
-        .filter_map(|channel| Some((channel.place(), channel.word.as_ref()?)))
-        .chain(
-            vectors
-                .iter()
-                .map(|vector| (format!("test vector \"{}\" of group \"{}\"", vector.name, vector.group), &vector.word)),
-        )
+        .map(|vector| (format!("test vector \"{}\" of group \"{}\"", vector.name, vector.group), &vector.word))
         .collect();
     for field in FIELDS {
         let mask = held_bits(map, field.name);
         if mask == 0 {
             continue;
         }
-        let missed = words.iter().filter(|(_, word)| (field.value)(word) & !mask != 0);
-        // The largest word is named, the first of equals.
-        if let Some((place, word)) = missed.rev().max_by_key(|(_, word)| (field.value)(word)) {
-            problems.push(MapError::TooNarrow {
+        // The largest word is named, the first of equals; a vector only where every channel fits.
+        let largest = |words: &[(String, &DriverWord)]| {
+            let missed = words.iter().filter(|(_, word)| (field.value)(word) & !mask != 0);
+            missed.rev().max_by_key(|(_, word)| (field.value)(word)).map(|(place, word)| MapError::TooNarrow {
                 field: field.name.to_owned(),
                 place: place.clone(),
                 value: (field.value)(word),
                 mask,
-            });
-        }
+            })
+        };
+        problems.extend(largest(&of_channels).or_else(|| largest(&of_vectors)));
     }
     if !problems.is_empty() {
         return Err(problems);

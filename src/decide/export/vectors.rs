@@ -18,6 +18,8 @@ pub struct TestVector {
     pub name: String,
     /// Group whose settings apply.
     pub group: String,
+    /// Group index from 0.
+    pub group_index: usize,
     /// Channel frequency, before injection.
     #[serde(rename = "channel_exact")]
     pub channel: Frequency,
@@ -129,6 +131,7 @@ impl Corner<'_> {
         Ok(TestVector {
             name: name.to_owned(),
             group: self.group.name.clone(),
+            group_index: self.index,
             channel,
             channel_rounded: RoundedHz::of(channel).map_err(exact)?,
             on_raster,
