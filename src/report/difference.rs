@@ -94,8 +94,9 @@ fn tone_sentence(tone: &ToneChange) -> String {
         (old, new) => offset(new.or(old)),
     };
     let what = match tone.change {
-        "appeared" => format!("appeared at {}", level(tone.new_level_dbc)),
-        "gone" => format!("gone, was {}", level(tone.old_level_dbc)),
+        "appeared" => format!("appeared, level {}", level(tone.new_level_dbc)),
+        "gone" => format!("gone, level was {}", level(tone.old_level_dbc)),
+        "moved" => format!("moved, level {}", level(tone.new_level_dbc)),
         "known part" => "level unknown, its known part changed".to_owned(),
         "level" => format!("{} → {}", level(tone.old_level_dbc), level(tone.new_level_dbc)),
         other => format!("{other}: {} → {}", level(tone.old_level_dbc), level(tone.new_level_dbc)),
