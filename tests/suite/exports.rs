@@ -366,7 +366,7 @@ static void show(const struct {name}_word *w) {{
         (long long)w->achieved_hz, w->achieved_millihertz, {values});
 }}
 int main(void) {{
-    unsigned i, j;
+    int i, j;
     for (i = 0; i < {upper}_CHANNELS; i++) {{
         show(&{name}_channels[i]);
         for (j = 0; j < {upper}_REGISTERS; j++) printf("r %llx\n", (unsigned long long){name}_channel_registers[i][j]);
@@ -385,9 +385,19 @@ int main(void) {{
 #[test]
 fn a_c_program_reads_the_header_back() {
     let mut words = 0;
-    for (result, name) in [(&*DEMO, "thornmap_demo"), (&small("1000"), "thornmap_7_small_plan")] {
+    let with_void = format!("{LIST}\n[[channels]]\nname = \"void\"\nlist = [\"500 MHz\"]\n");
+    let void = survey(&plan("1000", &with_void), &|_| {}).unwrap();
+    let cases = [
+        (&*DEMO, None, "thornmap_demo"),
+        (&small("1000"), None, "thornmap_7_small_plan"),
+        // The widest words there are.
+        (&small("\"2^48\""), None, "thornmap_7_small_plan"),
+        // A group without any legal word: its array holds no row.
+        (&void, Some("void"), "thornmap_7_small_plan"),
+    ];
+    for (result, group, name) in cases {
         let plan = &result.plan;
-        let found = export(result, None, Some(&map())).unwrap();
+        let found = export(result, group, Some(&map())).unwrap();
         let folder = tempfile::TempDir::new().unwrap();
         let header = text(&found, FirmwareFormat::CHeader);
         assert!(!header.contains("float") && !header.contains("double "), "no floats");
@@ -417,7 +427,8 @@ fn a_c_program_reads_the_header_back() {
         want.push(format!("thornmap.export/1 {} 16", plan.sha256));
         assert_eq!(printed.lines().collect::<Vec<_>>(), want);
     }
-    assert_eq!(words, 354 + 12 + 5 + 6);
+    // 500 MHz lies on an integer: that group has no vector for the nearest channel beside one.
+    assert_eq!(words, (354 + 12) + 2 * (5 + 6) + 5);
 }
 
 /// A plan of one channel for the binary.
