@@ -54,6 +54,9 @@ name = "+pair"
 list = ["405 MHz", "405.0125 MHz", "405.025 MHz", "1217/3 MHz", "407.4 MHz", "430 MHz"]
 "#;
 
+/// One channel, 50 kHz from 81 times the reference at the VCO.
+const ONE: &str = "[[channels]]\nname = \"one\"\nlist = [\"405.0125 MHz\"]\n";
+
 /// The demonstration plan, surveyed once.
 static DEMO: LazyLock<SurveyResult> = LazyLock::new(|| survey(&demo_plan(), &|_| {}).unwrap());
 
@@ -257,12 +260,10 @@ fn a_map_that_does_not_fit_is_refused_with_the_channel() {
     let largest = DEMO.channels.iter().rev().max_by_key(|channel| channel.k).unwrap();
     let named = format!("channel {} of group \"{}\" needs k = {}", largest.channel, largest.group, largest.k.unwrap());
     assert!(message.contains("\"k\" is too narrow") && message.contains(&named), "{message}");
-    // The one channel's K = 43691 fits 20 bits, the vector K = M − 1 does not: it is named.
-    let mut fits = demo_plan();
-    fits.groups[0].channels = ChannelList::List(vec![Frequency::from_whole_hz(433_112_500)]);
-    let result = survey(&fits, &|_| {}).unwrap();
-    let map = parse_register_map(&MAP.replace("msb = 43", "msb = 15")).unwrap();
-    let message = export(&result, Some("uplink"), Some(&map)).unwrap_err().to_string();
+    // The one channel's K = 2 fits four bits, the vector K = M - 1 = 999 does not: it is named.
+    let result = survey(&plan("1000", ONE), &|_| {}).unwrap();
+    let map = parse_register_map(&MAP.replace("msb = 43\nlsb = 0\nlow = 4", "msb = 0\nlsb = 0\nlow = 48")).unwrap();
+    let message = export(&result, None, Some(&map)).unwrap_err().to_string();
     assert!(message.contains("test vector \"K = M - 1, one step below an integer\""), "{message}");
     let message = refused(&MAP.replace("msb = 23\nlsb = 8", "msb = 13\nlsb = 8"));
     assert!(message.contains("\"n\" is too narrow") && message.contains("n = 92"), "{message}");
@@ -387,11 +388,12 @@ fn a_c_program_reads_the_header_back() {
     let mut words = 0;
     let with_void = format!("{LIST}\n[[channels]]\nname = \"void\"\nlist = [\"500 MHz\"]\n");
     let void = survey(&plan("1000", &with_void), &|_| {}).unwrap();
+    let wide = survey(&plan("\"2^48\"", ONE), &|_| {}).unwrap();
     let cases = [
         (&*DEMO, None, "thornmap_demo"),
         (&small("1000"), None, "thornmap_7_small_plan"),
         // The widest words there are.
-        (&small("\"2^48\""), None, "thornmap_7_small_plan"),
+        (&wide, None, "thornmap_7_small_plan"),
         // A group without any legal word: its array holds no row.
         (&void, Some("void"), "thornmap_7_small_plan"),
     ];
@@ -428,7 +430,7 @@ fn a_c_program_reads_the_header_back() {
         assert_eq!(printed.lines().collect::<Vec<_>>(), want);
     }
     // 500 MHz lies on an integer: that group has no vector for the nearest channel beside one.
-    assert_eq!(words, (354 + 12) + 2 * (5 + 6) + 5);
+    assert_eq!(words, (354 + 12) + (5 + 6) + (1 + 6) + 5);
 }
 
 /// A plan of one channel for the binary.
