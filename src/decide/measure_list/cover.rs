@@ -67,7 +67,14 @@ impl Bits {
     }
 
     fn members(&self) -> impl Iterator<Item = usize> + '_ {
-        (0..self.0.len() * 64).filter(|member| self.holds(*member))
+        self.0.iter().enumerate().flat_map(|(place, word)| {
+            let mut left = *word;
+            std::iter::from_fn(move || {
+                let bit = (left != 0).then(|| left.trailing_zeros())?;
+                left &= left - 1;
+                Some(place * 64 + bit as usize)
+            })
+        })
     }
 }
 
@@ -75,7 +82,7 @@ impl Bits {
 type Candidate = (usize, Bits);
 
 /// Returns a cover of the needs 0 … `needs` − 1 by as few of `sets` as can be found: the shortest one unless the search
-/// is cut off after `most_nodes` branches. Of equal sets the first in the list is taken, so that the list's order is the
+/// is cut off after `most_steps` steps (a branch takes one step for each set of its part). Of equal sets the first in the list is taken, so that the list's order is the
 /// caller's preference.
 ///
 /// # Panics
@@ -91,7 +98,7 @@ type Candidate = (usize, Bits);
 /// assert!(cover.is_proven_shortest());
 /// ```
 #[must_use]
-pub fn shortest_cover(sets: &[Vec<usize>], needs: usize, most_nodes: u64) -> Cover {
+pub fn shortest_cover(sets: &[Vec<usize>], needs: usize, most_steps: u64) -> Cover {
     let mut candidates: Vec<Candidate> = Vec::new();
     let mut union = Bits::empty(needs);
     let mut seen: BTreeMap<Bits, usize> = BTreeMap::new();
@@ -110,9 +117,9 @@ pub fn shortest_cover(sets: &[Vec<usize>], needs: usize, most_nodes: u64) -> Cov
     let not_coverable = (0..needs).filter(|need| !union.holds(*need)).collect();
     let (mut chosen, candidates, open) = reduced(candidates, union);
     let mut lower_bound = chosen.len();
-    let mut nodes = most_nodes;
+    let mut steps = most_steps;
     for part in components(candidates, &open) {
-        let mut search = Search::new(part, &mut nodes);
+        let mut search = Search::new(part, &mut steps);
         let (sets, bound) = search.run();
         lower_bound += bound;
         chosen.extend(sets);
@@ -216,21 +223,21 @@ struct Search<'a> {
     candidates: Vec<Candidate>,
     needs: Bits,
     best: Vec<usize>,
-    nodes: &'a mut u64,
+    steps: &'a mut u64,
     cut_off: bool,
 }
 
 impl<'a> Search<'a> {
-    fn new(candidates: Vec<Candidate>, nodes: &'a mut u64) -> Self {
+    fn new(candidates: Vec<Candidate>, steps: &'a mut u64) -> Self {
         let size = candidates.first().map_or(0, |(_, bits)| bits.0.len() * 64);
         let needs = candidates.iter().fold(Bits::empty(size), |needs, (_, bits)| needs.with(bits));
         let best = greedy(&candidates, &needs);
-        Self { candidates, needs, best, nodes, cut_off: false }
+        Self { candidates, needs, best, steps, cut_off: false }
     }
 
     /// Returns the caller's places of the best cover, and a lower bound that equals its size when the search finished.
     fn run(&mut self) -> (Vec<usize>, usize) {
-        let at_root = independent(&self.candidates, &self.needs);
+        let at_root = at_least(&self.candidates, &self.needs);
         let open = self.needs.clone();
         if at_root < self.best.len() {
             self.branch(&open, &mut Vec::new());
@@ -246,14 +253,14 @@ impl<'a> Search<'a> {
             }
             return;
         }
-        if taken.len() + independent(&self.candidates, open) >= self.best.len() {
+        if taken.len() + at_least(&self.candidates, open) >= self.best.len() {
             return;
         }
-        if *self.nodes == 0 {
+        let Some(left) = self.steps.checked_sub(self.candidates.len() as u64) else {
             self.cut_off = true;
             return;
-        }
-        *self.nodes -= 1;
+        };
+        *self.steps = left;
         // The need with the fewest holders gives the fewest branches; the fullest set first.
         let Some((_, holders)) =
             holders(&self.candidates, open).into_iter().min_by_key(|(need, holders)| (holders.count(), *need))
@@ -283,6 +290,29 @@ fn greedy(candidates: &[Candidate], needs: &Bits) -> Vec<usize> {
         taken.push(place);
     }
     taken
+}
+
+/// Returns a number of sets below which no cover of the open needs exists.
+fn at_least(candidates: &[Candidate], open: &Bits) -> usize {
+    independent(candidates, open).max(by_shares(candidates, open))
+}
+
+/// Returns the sum over the needs of one over the size of the largest set that holds them, rounded up: any set pays at
+/// most one for its needs, so that a cover has at least so many sets.
+fn by_shares(candidates: &[Candidate], open: &Bits) -> usize {
+    let mut largest = vec![0usize; open.0.len() * 64];
+    for (_, bits) in candidates {
+        let inside = bits.and(open);
+        let size = inside.count();
+        for need in inside.members() {
+            largest[need] = largest[need].max(size);
+        }
+    }
+    let sum: f64 = largest.iter().filter(|size| **size > 0).map(|size| 1.0 / *size as f64).sum();
+    #[allow(clippy::cast_possible_truncation, clippy::cast_sign_loss, reason = "at most the number of needs")]
+    // The guard keeps rounding from lifting a sum that is exactly whole.
+    let whole = (sum - 1e-9).ceil().max(0.0) as usize;
+    whole
 }
 
 /// Returns how many needs can be picked so that no set holds two of them: every cover has at least so many sets.

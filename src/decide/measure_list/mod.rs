@@ -30,8 +30,8 @@ pub const CAUTIONS: [&str; 5] = [
     "the list is a prediction's; it shows what the verdicts rely on and proves no compliance",
 ];
 
-/// Branches after which the search for a shorter list gives up.
-pub const MOST_NODES: u64 = 200_000;
+/// Steps after which the search for a shorter list gives up: a few seconds at most.
+pub const MOST_STEPS: u64 = 3_000_000;
 
 /// A need in words, with whether the list meets it.
 #[derive(Debug, Clone, PartialEq, Eq, Serialize)]
@@ -126,7 +126,7 @@ pub struct MeasureList {
 pub fn measure_list(result: &SurveyResult, classes: Classes) -> Result<MeasureList, AssessError> {
     let demand = demand(result, classes)?;
     let sets: Vec<Vec<usize>> = demand.met.iter().map(|met| met.keys().copied().collect()).collect();
-    let cover = shortest_cover(&sets, demand.needs.len(), MOST_NODES);
+    let cover = shortest_cover(&sets, demand.needs.len(), MOST_STEPS);
     let mut first: BTreeMap<usize, usize> = BTreeMap::new();
     for chosen in &cover.chosen {
         for need in demand.met[*chosen].keys() {
