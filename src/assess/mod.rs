@@ -5,6 +5,7 @@ mod channel;
 mod lines;
 mod listing;
 mod noise;
+mod noise_at;
 mod placement;
 mod result;
 mod sequence;

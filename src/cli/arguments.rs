@@ -31,6 +31,12 @@ pub enum Command {
     Remedy(RemedyArguments),
     /// Rank the mechanisms that put a tone at an offset, and name the experiment that tells them apart
     Identify(IdentifyArguments),
+    /// List the fewest channels to measure that show everything the verdicts rely on
+    Measure(MeasureArguments),
+    /// Write words, avoided ranges and driver test vectors for firmware
+    Export(ExportArguments),
+    /// Show what changed between two surveys, and which inputs changed with it
+    Diff(DiffArguments),
     /// Validate a plan and say what it holds
     Check(PlanArgument),
     /// Print a commented starter plan
@@ -284,4 +290,90 @@ pub struct SequenceArguments {
     /// No messages on standard error unless something fails
     #[arg(long, short)]
     pub quiet: bool,
+}
+
+/// Formats of `export`.
+#[derive(Debug, Clone, Copy, PartialEq, Eq, ValueEnum)]
+pub enum ExportFormat {
+    /// A C99 header with static const arrays
+    CHeader,
+    /// One CSV table
+    Csv,
+    /// JSON
+    Json,
+}
+
+/// Arguments of `export`.
+#[derive(Debug, Args)]
+pub struct ExportArguments {
+    /// Plan file (TOML)
+    #[arg(value_name = "PLAN", value_hint = ValueHint::FilePath)]
+    pub plan: PathBuf,
+    /// Format
+    #[arg(long = "as", value_name = "FORMAT")]
+    pub format: ExportFormat,
+    /// File to write [default: standard output]
+    #[arg(long, value_name = "FILE", value_hint = ValueHint::FilePath)]
+    pub out: Option<PathBuf>,
+    /// Register map of your own (TOML: [[register]] name, width, address, base; [[field]] name, register, msb, lsb, low)
+    #[arg(long, value_name = "BITS.toml", value_hint = ValueHint::FilePath)]
+    pub map: Option<PathBuf>,
+    /// One channel group only
+    #[arg(long, value_name = "NAME")]
+    pub group: Option<String>,
+    /// Threads to use [default: all cores]
+    #[arg(long, value_name = "N", value_parser = clap::value_parser!(u16).range(1..=1024))]
+    pub jobs: Option<u16>,
+    /// No messages on standard error unless something fails
+    #[arg(long, short)]
+    pub quiet: bool,
+}
+
+/// Arguments of `diff`.
+#[derive(Debug, Args)]
+pub struct DiffArguments {
+    /// The survey.json before
+    #[arg(value_name = "OLD.json", value_hint = ValueHint::FilePath)]
+    pub old: PathBuf,
+    /// The survey.json after
+    #[arg(value_name = "NEW.json", value_hint = ValueHint::FilePath)]
+    pub new: PathBuf,
+    /// Print the result as JSON
+    #[arg(long)]
+    pub json: bool,
+    /// Write a page as well
+    #[arg(long, value_name = "FILE", value_hint = ValueHint::FilePath)]
+    pub html: Option<PathBuf>,
+    /// Exit with status 3 when a channel of both surveys got worse and is now bad, or marginal or worse
+    #[arg(long, value_name = "VERDICT")]
+    pub fail_on: Option<FailOn>,
+    /// No messages on standard error unless something fails
+    #[arg(long, short)]
+    pub quiet: bool,
+}
+
+/// What `measure` counts as one boundary class.
+#[derive(Debug, Clone, Copy, PartialEq, Eq, ValueEnum)]
+pub enum ClassChoice {
+    /// Each fraction p/q
+    Fraction,
+    /// Each denominator q: fewer channels on a wide plan
+    Denominator,
+}
+
+/// Arguments of `measure`.
+#[derive(Debug, Args)]
+pub struct MeasureArguments {
+    /// Plan file (TOML)
+    #[arg(value_name = "PLAN", value_hint = ValueHint::FilePath)]
+    pub plan: PathBuf,
+    /// What counts as one boundary class
+    #[arg(long, value_name = "CLASS", default_value = "fraction")]
+    pub each: ClassChoice,
+    /// Folder for measure.html, measure.csv and measure.json [default: reports/<plan stem>]
+    #[arg(long, value_name = "DIR", value_hint = ValueHint::DirPath)]
+    pub out: Option<PathBuf>,
+    #[command(flatten)]
+    #[allow(missing_docs, reason = "clap shows the options of the group itself")]
+    pub common: CommonOptions,
 }

@@ -3,8 +3,11 @@
 mod arguments;
 mod channel;
 mod compare;
+mod diff;
+mod export;
 mod failure;
 mod identify;
+mod measure;
 mod modulator_words;
 mod output;
 mod plan_file;
@@ -43,6 +46,9 @@ fn dispatch(command: &Command) -> Result<(), Failure> {
         Command::Compare(arguments) => compare::run(arguments),
         Command::Remedy(arguments) => remedy::run(arguments),
         Command::Identify(arguments) => identify::run(arguments),
+        Command::Diff(arguments) => diff::run(arguments),
+        Command::Measure(arguments) => measure::run(arguments),
+        Command::Export(arguments) => export::run(arguments),
         Command::Check(arguments) => plan_file::check(&arguments.plan),
         Command::Example => output::print(&crate::plan::example_plan()),
         Command::Schema => {

@@ -1,5 +1,8 @@
 //! What follows from the stages before: which cause, which choice, which cure.
 
 pub mod compare;
+pub mod diff;
+pub mod export;
 pub mod identify;
+pub mod measure_list;
 pub mod remedy;

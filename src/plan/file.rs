@@ -50,7 +50,7 @@ fn read_with(path: &Path, parse: Parse) -> Result<Plan, PlanFailure> {
 }
 
 /// Returns the text of a file, or why there is none.
-fn read_text(path: &Path) -> Result<String, PlanFailure> {
+pub(super) fn read_text(path: &Path) -> Result<String, PlanFailure> {
     let io = |reason: String| PlanFailure::Io { path: path.to_owned(), reason };
     if path.is_dir() {
         return Err(io("is a folder, expected a file".to_owned()));

@@ -5,9 +5,12 @@
 mod beats;
 mod cli;
 mod comparisons;
+mod diffs;
 mod examples;
+mod exports;
 mod identifications;
 mod loops;
+mod measurements;
 mod modulators;
 mod outside;
 mod plans;
