@@ -57,6 +57,8 @@ pub struct Candidate {
     pub residue: Option<i64>,
     /// Made after the loop.
     pub after_loop: bool,
+    /// A boundary or multiple of K/M on this offset has a known part of its own.
+    pub family_known: bool,
     /// Half width of the uncertainty of the computed lines \[dB\].
     pub level_uncertainty_db: Option<f64>,
     /// Coupling from an anchor.
@@ -83,6 +85,7 @@ impl Candidate {
             boundary: None,
             residue: None,
             after_loop: false,
+            family_known: false,
             level_uncertainty_db: None,
             coupling: Part::Absent,
             nonlinearity: Part::Absent,
@@ -127,6 +130,7 @@ impl Candidate {
         join(&mut self.leakage, other.leakage);
         join(&mut self.clock, other.clock);
         self.after_loop &= other.after_loop;
+        self.family_known |= other.family_known;
         self.harmonic = self.harmonic.or(other.harmonic);
         self.boundary = self.boundary.or(other.boundary);
         self.residue = self.residue.or(other.residue);
@@ -143,7 +147,9 @@ impl Candidate {
 pub fn gather(mut candidates: Vec<Candidate>) -> Vec<Candidate> {
     candidates.sort_by(|a, b| a.offset.cmp(&b.offset).then(a.origin.cmp(&b.origin)));
     let mut gathered: Vec<Candidate> = Vec::with_capacity(candidates.len());
-    for candidate in candidates {
+    for mut candidate in candidates {
+        let is_family = matches!(candidate.origin, Origin::Boundary | Origin::Fractional);
+        candidate.family_known = is_family && candidate.parts().iter().any(|(_, part)| part.level().is_some());
         match gathered.last_mut() {
             Some(last) if last.offset == candidate.offset => last.absorb(candidate),
             _ => gathered.push(candidate),
@@ -203,6 +209,7 @@ pub fn to_tone(candidate: Candidate, position: Position) -> Tone {
         inside_loop: position.inside_loop,
         inside_guard: position.inside_guard,
         after_loop: candidate.after_loop,
+        family_known: candidate.family_known,
         residue: candidate.residue,
         victims: Vec::new(),
         unknown,
@@ -233,6 +240,19 @@ mod tests {
         assert!((tone.level_dbc.unwrap() + 53.979_4).abs() < 1e-4);
         assert_eq!(tone.basis, Basis::Assumed);
         assert!((tone.margin_db.unwrap() - 3.979_4).abs() < 1e-4);
+    }
+
+    #[test]
+    fn a_known_part_of_another_origin_does_not_make_a_boundary_known() {
+        let mut boundary = at(Origin::Boundary, 1000);
+        boundary.coupling = Part::Unknown("no anchor".to_owned());
+        let mut line = at(Origin::SubFractional, 1000);
+        line.modulator = Part::Known(-76.0, Basis::Assumed);
+        let tone = to_tone(gather(vec![boundary.clone(), line]).remove(0), POSITION);
+        assert_eq!((tone.origin, tone.family_known), (Origin::Boundary, false));
+        assert!(tone.known_level_dbc.is_some());
+        boundary.modulator = Part::Known(-80.0, Basis::Assumed);
+        assert!(to_tone(gather(vec![boundary]).remove(0), POSITION).family_known);
     }
 
     #[test]

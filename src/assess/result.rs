@@ -235,6 +235,10 @@ pub struct Tone {
     /// Made after the loop (`output` family): its unknown level is at most marginal.
     #[serde(skip)]
     pub after_loop: bool,
+    /// A boundary or multiple of K/M at this offset has a known part of its own; other known parts that fall on the same
+    /// offset do not make it so.
+    #[serde(skip)]
+    pub family_known: bool,
     /// `h·K mod± M`, signed, for tones of the modulator family.
     #[serde(skip)]
     pub residue: Option<i64>,

@@ -123,8 +123,10 @@ fn judge_tone(evidence: &Evidence, tone: &Tone) -> Option<Reason> {
             let part = if tone.level_dbc.is_some() { "" } else { " (known part alone)" };
             Some(format!("{place}: {level:.1} dBc{part}, {:.1} dB above its limit", -margin))
         }
-        (Some(level), _) => (evidence.mask == MaskState::Absent && tone.inside_loop && of_modulator)
-            .then(|| format!("{place}: {level:.1} dBc inside the loop, where no mask allows a tone")),
+        (Some(level), _) => {
+            (evidence.mask == MaskState::Absent && tone.inside_loop && of_modulator && tone.family_known)
+                .then(|| format!("{place}: {level:.1} dBc inside the loop, where no mask allows a tone"))
+        }
     };
     if let Some(text) = above {
         return Some(reason(Rule::B2, text));

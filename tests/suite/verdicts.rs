@@ -32,6 +32,7 @@ fn tone(level_dbc: Option<f64>, limit_dbc: Option<f64>) -> Tone {
         inside_loop: true,
         inside_guard: true,
         after_loop: false,
+        family_known: true,
         residue: Some(7),
         victims: Vec::new(),
         unknown: if level_dbc.is_none() { vec!["coupling: no anchor".to_owned()] } else { Vec::new() },
