@@ -9,6 +9,7 @@ mod noise_points;
 mod reference_tone;
 mod response;
 mod settings;
+mod simulation;
 mod stability;
 
 pub use charge::{ChargeCurve, ChargeTerms, static_charge_cycles};
@@ -20,3 +21,4 @@ pub use noise_points::{BOLTZMANN_J_PER_K, NoiseRole, detector_flicker_dbc_per_hz
 pub use reference_tone::{reference_tone_dbc, ripple_tone_dbc};
 pub use response::{LoopPoint, LoopResponse};
 pub use settings::{ChargeTable, FilterComponents, LoopModelError, NoisePoints, OscillatorNoise, ResponseTable};
+pub use simulation::{Sample, SimulatedDetector, Simulation, SimulationError, SimulationInput, Within};

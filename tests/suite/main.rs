@@ -17,6 +17,7 @@ mod plans;
 mod remedies;
 mod reports;
 mod sequences;
+mod simulations;
 mod spectra;
 mod surveys;
 mod tree;
