@@ -1,7 +1,5 @@
 //! The event-driven simulation against closed forms, and predictions against it.
 
-use std::f64::consts::TAU;
-
 use thornmap::loop_model::{
     FilterDesign, FilterNetwork, LoopPoint, LoopResponse, SimulatedDetector, Simulation, SimulationInput,
     reference_tone_dbc,
@@ -38,9 +36,7 @@ fn config(order: u8, k: u64, m: u64) -> ModulatorConfig {
 fn phases(config: &ModulatorConfig) -> Box<dyn FnMut() -> f64> {
     let mut modulator = start(config);
     let (k, m) = (config.k() as f64, config.modulus().get() as f64);
-    let (mut buffer, mut place, mut sum) = (vec![0; 4096], 4096, 0i64);
-    let mut count = 0.0;
-    let _ = m;
+    let (mut buffer, mut place, mut sum, mut count) = (vec![0; 4096], 4096, 0i64, 0.0);
     Box::new(move || {
         if place == buffer.len() {
             modulator.fill(&mut buffer);
@@ -87,9 +83,137 @@ fn first_order_lines_in_the_loop_are_those_of_the_linear_prediction() {
         let seen = correlate(&record, residue, m, Window::Rectangular).norm() / sinc;
         let wanted = correlate(&ideal, residue, m, Window::Rectangular).norm() * response.closed_loop(offset_hz).norm();
         let (seen, wanted) = (sideband_dbc(seen).unwrap(), sideband_dbc(wanted).unwrap());
-        println!("h {h} {offset_hz} seen {seen} wanted {wanted}");
         assert!((seen - wanted).abs() < 0.1, "h = {h}: {seen} against {wanted}");
     }
     assert_eq!(within.cycles, 4096);
-    let _ = (TAU, reference_tone_dbc as fn(&FilterNetwork, f64, f64, f64, f64, u64) -> Option<f64>);
+}
+
+#[test]
+fn reference_sidebands_of_leakage_and_offset_current_follow_the_formula() {
+    let (divider, pfd_hz) = (88.0, 19.2e6);
+    let mut checked = 0;
+    for more in [(None, None), (Some(0.4), None)] {
+        let network = network(divider, more);
+        for drain_a in [1e-9, 1e-6, 14e-6, 60e-6] {
+            let detector = SimulatedDetector { drain_a, ..ideal() };
+            let input = SimulationInput {
+                network: &network,
+                gain_hz_per_v: GAIN_HZ_PER_V,
+                pfd_hz,
+                target_hz: divider * pfd_hz,
+                detector,
+                start_error_hz: 0.0,
+                start_phase_cycles: -divider * drain_a / CURRENT_A,
+            };
+            let integer = Box::new(|| 0.0);
+            let (_, within) = Simulation::new(input, integer).unwrap().record(20_000, 4096, &|_| {}).unwrap();
+            for (h, line) in (1u64..).zip(within.lines) {
+                let wanted = reference_tone_dbc(&network, drain_a, CURRENT_A, GAIN_HZ_PER_V, pfd_hz, h).unwrap();
+                let seen = sideband_dbc(line.norm()).unwrap();
+                assert!((seen - wanted).abs() < 0.3, "{drain_a} A, h = {h}: {seen} against {wanted}");
+                checked += 1;
+            }
+        }
+    }
+    assert_eq!(checked, 24);
+}
+
+#[test]
+fn a_small_step_settles_as_the_linear_loop_does() {
+    // f_pfd 400 times the bandwidth: sampling is negligible. The step response of E(s) = 1/(1 + A(s)) by trapezoidal
+    // steps far finer than the loop, from the impedance's modes alone.
+    let divider = 90.25;
+    let pfd_hz = 24e6;
+    for more in [(None, None), (Some(0.4), None), (Some(0.4), Some(0.4))] {
+        let network = network(divider, more);
+        let step_hz = 1e4;
+        let input = SimulationInput {
+            network: &network,
+            gain_hz_per_v: GAIN_HZ_PER_V,
+            pfd_hz,
+            target_hz: divider * pfd_hz,
+            detector: ideal(),
+            start_error_hz: -step_hz,
+            start_phase_cycles: 0.0,
+        };
+        let samples = Simulation::new(input, Box::new(|| 0.0)).unwrap().transient(2400).unwrap();
+        // Linear: current = -I·phase/N averaged over the cycle; fourth-order Runge-Kutta.
+        let poles = network.poles();
+        let slope = |x: &[f64]| -> Vec<f64> {
+            let (phase, direct, modes) = (x[0], x[1], &x[2..]);
+            let current = -CURRENT_A * phase / divider;
+            let mut out = vec![GAIN_HZ_PER_V * (direct + modes.iter().sum::<f64>()), network.integrator() * current];
+            out.extend(poles.iter().zip(modes).map(|(pole, mode)| pole.residue * current - pole.rate * mode));
+            out
+        };
+        let mut x = vec![0.0; 2 + poles.len()];
+        x[1] = -step_hz / GAIN_HZ_PER_V;
+        let substeps = 40;
+        let h = 1.0 / pfd_hz / f64::from(substeps);
+        let mut worst: f64 = 0.0;
+        for sample in &samples {
+            let linear = GAIN_HZ_PER_V * x[1..].iter().sum::<f64>();
+            worst = worst.max((sample.frequency_hz - linear).abs() / step_hz);
+            for _ in 0..substeps {
+                let add =
+                    |x: &[f64], k: &[f64], by: f64| -> Vec<f64> { x.iter().zip(k).map(|(a, b)| a + by * b).collect() };
+                let k1 = slope(&x);
+                let k2 = slope(&add(&x, &k1, h / 2.0));
+                let k3 = slope(&add(&x, &k2, h / 2.0));
+                let k4 = slope(&add(&x, &k3, h));
+                for (i, value) in x.iter_mut().enumerate() {
+                    *value += h / 6.0 * (k1[i] + 2.0 * k2[i] + 2.0 * k3[i] + k4[i]);
+                }
+            }
+        }
+        assert!(worst < 0.02, "{worst} of the step with {} poles", poles.len());
+        assert!(samples.last().unwrap().frequency_hz.abs() < 1e-3 * step_hz);
+    }
+}
+
+#[test]
+fn a_large_step_slips_cycles_and_still_locks() {
+    let (divider, pfd_hz) = (90.0, 20e6);
+    let network = network(divider, (None, None));
+    let step_hz = 400e6;
+    let input = SimulationInput {
+        network: &network,
+        gain_hz_per_v: GAIN_HZ_PER_V,
+        pfd_hz,
+        target_hz: divider * pfd_hz,
+        detector: ideal(),
+        start_error_hz: -step_hz,
+        start_phase_cycles: 0.0,
+    };
+    let samples = Simulation::new(input, Box::new(|| 0.0)).unwrap().transient(12_000).unwrap();
+    let last = samples.last().unwrap();
+    assert!(last.frequency_hz.abs() < 1.0, "{last:?}");
+    // Whole comparisons were lost: the phase ends on a multiple of N, not on zero.
+    let slips = last.phase_cycles / divider;
+    assert!(slips < -0.5 && (slips - slips.round()).abs() < 1e-6, "{slips}");
+}
+
+#[test]
+fn a_dead_zone_and_a_reset_delay_keep_the_loop_locked() {
+    let (divider, pfd_hz) = (90.3, 20e6);
+    let network = network(divider, (Some(0.4), None));
+    let config = config(3, 3 << 10, 10 << 10);
+    for detector in [
+        SimulatedDetector { dead_zone_s: 20e-12, ..ideal() },
+        SimulatedDetector { reset_delay_s: 2e-9, up_a: 1.01 * CURRENT_A, down_a: 0.99 * CURRENT_A, ..ideal() },
+    ] {
+        let input = SimulationInput {
+            network: &network,
+            gain_hz_per_v: GAIN_HZ_PER_V,
+            pfd_hz,
+            target_hz: divider * pfd_hz,
+            detector,
+            start_error_hz: 1e5,
+            start_phase_cycles: 0.0,
+        };
+        let (record, _) = Simulation::new(input, phases(&config)).unwrap().record(20_000, 10_000, &|_| {}).unwrap();
+        let mean = record.iter().sum::<f64>() / record.len() as f64;
+        let spread = record.iter().map(|p| (p - mean).powi(2)).sum::<f64>() / record.len() as f64;
+        assert!(mean.abs() < 2.0 && spread.sqrt() < 0.1, "mean {mean}, spread {}", spread.sqrt());
+    }
 }
