@@ -17,7 +17,13 @@ fn run(pole_ratios: (Option<f64>, Option<f64>), dead_zone_s: f64) -> f64 {
         gain_hz_per_v: 32e6,
         pfd_hz: 20e6,
         target_hz: 90.25 * 20e6,
-        detector: SimulatedDetector { up_a: 2.525e-3, down_a: 2.475e-3, drain_a: 1e-9, dead_zone_s, reset_delay_s: 0.0 },
+        detector: SimulatedDetector {
+            up_a: 2.525e-3,
+            down_a: 2.475e-3,
+            drain_a: 1e-9,
+            dead_zone_s,
+            reset_delay_s: 0.0,
+        },
         start_error_hz: 0.0,
         start_phase_cycles: 0.0,
     };

@@ -10,6 +10,7 @@ mod placement;
 mod result;
 mod sequence;
 mod setup;
+mod simulate;
 mod tolerance;
 mod verdict;
 mod victims;
@@ -26,6 +27,9 @@ pub use sequence::{
     best_seeds, captured_tones, recognise, sequence_facts,
 };
 pub use setup::{AssessError, LoopSource, Setup, gain_at, interpolate};
+pub use simulate::{
+    ComparedTone, DEFAULT_CYCLES, Settling, SimulateError, SimulatedChannel, simulate_channel, simulate_step,
+};
 pub use verdict::{Evidence, MaskState, judge};
 pub use view::{SpectrumView, spectrum_view};
 pub use whole_period::LineCheck;

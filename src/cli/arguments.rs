@@ -29,6 +29,8 @@ pub enum Command {
     Compare(CompareArguments),
     /// Find the cheapest cure of each bad channel, and the smallest set of PFD frequencies that leaves none bad
     Remedy(RemedyArguments),
+    /// Simulate a channel in time beside its prediction; with --step its settling
+    Simulate(SimulateArguments),
     /// Rank the mechanisms that put a tone at an offset, and name the experiment that tells them apart
     Identify(IdentifyArguments),
     /// List the fewest channels to measure that show everything the verdicts rely on
@@ -376,4 +378,36 @@ pub struct MeasureArguments {
     #[command(flatten)]
     #[allow(missing_docs, reason = "clap shows the options of the group itself")]
     pub common: CommonOptions,
+}
+
+/// Arguments of `simulate`.
+#[derive(Debug, Args)]
+pub struct SimulateArguments {
+    /// Plan file (TOML)
+    #[arg(value_name = "PLAN", value_hint = ValueHint::FilePath)]
+    pub plan: PathBuf,
+    /// Channel frequency with unit, before injection
+    #[arg(value_name = "FREQUENCY")]
+    pub frequency: String,
+    /// Channel group [default: the first whose range holds the frequency]
+    #[arg(long, value_name = "NAME")]
+    pub group: Option<String>,
+    /// Reference cycles simulated [default: 1048576; with --step 30 over the loop bandwidth]
+    #[arg(long, value_name = "N", value_parser = clap::value_parser!(u64).range(1024..=1 << 28))]
+    pub cycles: Option<u64>,
+    /// Simulate settling: the channel is reached from so far below (signed, at the output, with unit)
+    #[arg(long, value_name = "HZ", allow_hyphen_values = true)]
+    pub step: Option<String>,
+    /// Tolerance of settling, at the output, with unit [default: a ten-thousandth of the step]
+    #[arg(long, value_name = "HZ", requires = "step")]
+    pub tolerance: Option<String>,
+    /// Folder for the picture and the figures
+    #[arg(long, value_name = "DIR", value_hint = ValueHint::DirPath)]
+    pub out: Option<PathBuf>,
+    /// Print the result as JSON on standard output, and nothing else there
+    #[arg(long)]
+    pub json: bool,
+    /// No messages on standard error unless something fails
+    #[arg(long, short)]
+    pub quiet: bool,
 }

@@ -14,6 +14,7 @@ mod plan_file;
 mod progress;
 mod remedy;
 mod sequence;
+mod simulate;
 mod survey;
 
 use std::process::ExitCode;
@@ -45,6 +46,7 @@ fn dispatch(command: &Command) -> Result<(), Failure> {
         Command::Sequence(arguments) => sequence::run(arguments),
         Command::Compare(arguments) => compare::run(arguments),
         Command::Remedy(arguments) => remedy::run(arguments),
+        Command::Simulate(arguments) => simulate::run(arguments),
         Command::Identify(arguments) => identify::run(arguments),
         Command::Diff(arguments) => diff::run(arguments),
         Command::Measure(arguments) => measure::run(arguments),

@@ -21,6 +21,7 @@ mod positions;
 mod remedy;
 mod sequence;
 mod sequence_files;
+mod simulation;
 mod single_file;
 mod survey_json;
 mod svg_backend;
@@ -40,6 +41,9 @@ pub use positions::{hunt_json, hunt_text, intervals_json, intervals_text};
 pub use remedy::{remedy_files, remedy_json, remedy_text};
 pub use sequence::{OffsetScale, capture_json, capture_text, seeds_text, sequence_json, sequence_plot, sequence_text};
 pub use sequence_files::{CaptureError, SequenceForm, read_capture, sequence_bytes};
+pub use simulation::{
+    settling_files, settling_json, settling_text, simulation_files, simulation_json, simulation_text,
+};
 pub use single_file::{read_file, write_file};
 pub use survey_json::survey_json;
 pub use write::{add_files, check_target, write_set};

@@ -1,5 +1,10 @@
 //! The event-driven simulation against closed forms, and predictions against it.
 
+#![allow(clippy::cast_possible_truncation, clippy::cast_sign_loss, reason = "random settings of known size")]
+
+use rand::rngs::StdRng;
+use rand::{RngExt, SeedableRng};
+use rayon::prelude::*;
 use thornmap::loop_model::{
     FilterDesign, FilterNetwork, LoopPoint, LoopResponse, SimulatedDetector, Simulation, SimulationInput,
     reference_tone_dbc,
@@ -216,4 +221,116 @@ fn a_dead_zone_and_a_reset_delay_keep_the_loop_locked() {
         let spread = record.iter().map(|p| (p - mean).powi(2)).sum::<f64>() / record.len() as f64;
         assert!(mean.abs() < 2.0 && spread.sqrt() < 0.1, "mean {mean}, spread {}", spread.sqrt());
     }
+}
+
+/// One random case of prediction against simulation.
+struct Case {
+    order: u8,
+    mismatch_percent: f64,
+    offset_ua: f64,
+    modulus: u64,
+    k: u64,
+    ratio: f64,
+}
+
+/// The cases, seeded: orders 1 to 3, mismatch 0.5 to 5 %, offset from nothing to beyond the kink, moduli 2^b, prime and
+/// composite, the first line between 0.05 and 3 loop bandwidths.
+fn cases(count: usize, ratios: (f64, f64)) -> Vec<Case> {
+    let mut random = StdRng::seed_from_u64(404);
+    (0..count)
+        .map(|i| {
+            let order = 1 + (i % 3) as u8;
+            let modulus = [1 << 20, 1_048_573, 999_990, 1 << 17, 65_521][random.random_range(0..5usize)];
+            let ratio = random.random_range(ratios.0..ratios.1);
+            let share = 10f64.powf(random.random_range(0.05f64.log10()..3f64.log10())) / ratio;
+            let clear_ua = 2500.0 * 2f64.powi(i32::from(order) - 2) / 90.0;
+            Case {
+                order,
+                mismatch_percent: random.random_range(0.5..5.0),
+                offset_ua: [0.0, 0.3 * clear_ua, clear_ua, 1.3 * clear_ua][random.random_range(0..4usize)],
+                modulus,
+                k: ((share * modulus as f64) as u64).clamp(1, modulus - 1) | 1,
+                ratio,
+            }
+        })
+        .collect()
+}
+
+/// Returns predicted and simulated level of the strongest line in the loop of a case, and whether the static model was
+/// claimed.
+fn compared(case: &Case, cycles: u64) -> Option<(f64, f64)> {
+    let pfd_hz = 20e6;
+    let text = format!(
+        r#"schema = 1
+[reference]
+frequency = "20 MHz"
+[oscillator]
+range = ["1.7 GHz", "1.9 GHz"]
+gain = "32 MHz/V"
+[modulator]
+order = {}
+modulus = {}
+seeds = [1]
+[detector]
+current = "2.5 mA"
+mismatch = "{} %"
+offset_current = "{} uA"
+leakage = "1 nA"
+[loop]
+bandwidth = "{} Hz"
+phase_margin = "50 deg"
+design_divider = 90
+[boundary]
+largest_q = 1
+harmonics = 3
+[[channels]]
+list = ["{} Hz"]
+"#,
+        case.order,
+        case.modulus,
+        case.mismatch_percent,
+        case.offset_ua,
+        pfd_hz / case.ratio,
+        format_args!("{}/{}", 20_000_000u128 * (90 * u128::from(case.modulus) + u128::from(case.k)), case.modulus),
+    );
+    let plan = thornmap::plan::parse_plan(&text, "case", &|_| Err("none".to_owned())).unwrap();
+    let setup = thornmap::assess::Setup::new(&plan).unwrap();
+    let channel = plan.groups[0].channels.get(0).unwrap();
+    let found = thornmap::assess::simulate_channel(&setup, 0, channel, Some(cycles), &|_| {}).unwrap();
+    found
+        .tones
+        .iter()
+        .filter(|tone| tone.inside_loop)
+        .filter_map(|tone| tone.predicted_dbc.zip(tone.simulated_dbc))
+        .max_by(|a, b| a.1.total_cmp(&b.1))
+}
+
+/// Holds the cases against the simulation; returns how many were judged and every one that differs by more than 0.5 dB.
+fn held(cases: &[Case], cycles: u64) -> (usize, Vec<String>) {
+    let found: Vec<Option<Result<(), String>>> = cases
+        .par_iter()
+        .map(|case| {
+            let (predicted, simulated) = compared(case, cycles)?;
+            if simulated < -75.0 {
+                return None;
+            }
+            let text = format!(
+                "order {}, {:.2} %, {:.1} uA, {}/{}, ratio {:.1}: predicted {predicted:.2}, simulated {simulated:.2}",
+                case.order, case.mismatch_percent, case.offset_ua, case.k, case.modulus, case.ratio
+            );
+            Some(if (predicted - simulated).abs() <= 0.5 { Ok(()) } else { Err(text) })
+        })
+        .collect();
+    let judged: Vec<Result<(), String>> = found.into_iter().flatten().collect();
+    (judged.len(), judged.into_iter().filter_map(Result::err).collect())
+}
+
+#[test]
+fn predictions_hold_against_the_simulation() {
+    let is_long = std::env::var_os("THORNMAP_LONG").is_some();
+    let (count, cycles) = if is_long { (90, 1 << 20) } else { (12, 1 << 17) };
+    let (judged, off) = held(&cases(count, (25.0, 120.0)), cycles);
+    println!("{judged} judged, off: {off:#?}");
+    assert!(judged >= count / 3, "{judged}");
+    assert!(off.is_empty(), "{off:#?}");
 }

@@ -9,6 +9,8 @@ use super::machine::{Machine, SimulationError, SimulationInput};
 
 /// Samples of the phase within a cycle, for what happens at multiples of the PFD frequency.
 const SAMPLES_WITHIN: usize = 64;
+/// Parts of the average within the cycle.
+const PARTS: u64 = 16;
 
 /// One reference edge of a transient.
 #[derive(Debug, Clone, Copy, PartialEq)]
@@ -26,6 +28,8 @@ pub struct Sample {
 pub struct Within {
     /// Coefficients of the VCO phase at h·f_pfd, h = 1, 2, 3 \[cycles\].
     pub lines: [Complex64; 3],
+    /// Standard error of each coefficient, from sixteen parts of the average \[cycles\]: what the modulator leaves.
+    pub scatter_cycles: [f64; 3],
     /// Cycles averaged.
     pub cycles: u64,
 }
@@ -95,14 +99,20 @@ impl<'a> Simulation<'a> {
         let pfd_hz = self.input.pfd_hz;
         let mut machine = self.machine();
         let mut record = Vec::with_capacity(usize::try_from(cycles).unwrap_or(0));
-        let within_cycles = cycles.min(4096);
-        let mut sums = [Complex64::ZERO; 3];
+        let part_cycles = (cycles / PARTS).clamp(1, 256);
+        let within_cycles = (part_cycles * PARTS).min(cycles);
+        let first_within = settle + cycles - within_cycles;
+        let mut parts: Vec<[Complex64; 3]> = Vec::new();
         let phases = &mut self.phases;
         let target_hz = self.input.target_hz;
         each!(&mut machine, m => {
             for n in 0..settle + cycles {
-                let result = if n >= settle + cycles - within_cycles {
-                    let mut sampler = Sampler { sums: &mut sums, step_s: 1.0 / pfd_hz / SAMPLES_WITHIN as f64 };
+                let result = if n >= first_within {
+                    if (n - first_within) % part_cycles == 0 {
+                        parts.push([Complex64::ZERO; 3]);
+                    }
+                    let last = parts.len() - 1;
+                    let mut sampler = Sampler { sums: &mut parts[last], step_s: 1.0 / pfd_hz / SAMPLES_WITHIN as f64 };
                     m.cycle(&mut *phases, |plant, since, span, state, current| {
                         sampler.take(plant, since, span, state, current);
                     })
@@ -121,8 +131,7 @@ impl<'a> Simulation<'a> {
                 }
             }
         });
-        let count = (within_cycles * SAMPLES_WITHIN as u64) as f64;
-        Ok((record, Within { lines: sums.map(|sum| sum / count), cycles: within_cycles }))
+        Ok((record, averaged(&parts, part_cycles, within_cycles)))
     }
 
     /// Returns the loop's way at every reference edge.
@@ -147,6 +156,20 @@ impl<'a> Simulation<'a> {
         });
         Ok(samples)
     }
+}
+
+/// Returns mean and standard error of the parts.
+fn averaged(parts: &[[Complex64; 3]], part_cycles: u64, cycles: u64) -> Within {
+    let samples = (part_cycles * SAMPLES_WITHIN as u64) as f64;
+    let count = parts.len().max(1) as f64;
+    let mut within = Within { lines: [Complex64::ZERO; 3], scatter_cycles: [0.0; 3], cycles };
+    for h in 0..3 {
+        let mean = parts.iter().map(|part| part[h] / samples).sum::<Complex64>() / count;
+        let spread: f64 = parts.iter().map(|part| (part[h] / samples - mean).norm_sqr()).sum();
+        within.lines[h] = mean;
+        within.scatter_cycles[h] = (spread / (count * (count - 1.0).max(1.0))).sqrt();
+    }
+    within
 }
 
 /// Takes samples of the phase at even times within the cycle.

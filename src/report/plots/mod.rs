@@ -4,10 +4,12 @@ mod boundaries;
 mod frame;
 mod margins;
 mod sequence;
+mod simulation;
 mod spectrum;
 mod tone_map;
 
 pub(crate) use sequence::sequence_svg;
+pub(crate) use simulation::{settling_svg, simulation_svg};
 
 use super::ReportError;
 use super::svg_backend::standalone;
