@@ -1,5 +1,7 @@
 //! Cycles a second of the simulation in time, on one core.
 
+#![allow(clippy::unwrap_used, reason = "a bench fails by panicking")]
+
 use thornmap::loop_model::{FilterDesign, FilterNetwork, SimulatedDetector, Simulation, SimulationInput};
 
 const CYCLES: u64 = 1_000_000;

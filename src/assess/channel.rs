@@ -278,6 +278,7 @@ impl Legal<'_> {
             target_cycles: static_charge_cycles(drained, detector.current_a, placement.divider_ratio()),
             record: plan.analysis.record,
             pfd_hz,
+            vco_hz: placement.vco.to_f64_hz(),
         };
         let lines = family_lines(&input, self.setup.fft(), scratch)
             .map_err(|source| AssessError::Lines { channel: self.channel, source })?;
@@ -371,7 +372,7 @@ impl Legal<'_> {
         }
         if plan.modulator.settings.order >= 4 {
             result.warnings.push(
-                "orders 4 and 5: pulse-width sampling adds lines near -90 dBc that the static detector model lacks"
+                "orders 4 and 5: what the width of the detector's pulses adds beyond its second order is not in the model; lines near -90 dBc may be off"
                     .to_owned(),
             );
         }

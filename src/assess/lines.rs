@@ -93,6 +93,30 @@ pub struct LineInput<'a> {
     pub record: u64,
     /// PFD frequency \[Hz\].
     pub pfd_hz: f64,
+    /// VCO frequency \[Hz\].
+    pub vco_hz: f64,
+}
+
+impl LineInput<'_> {
+    /// Returns −jω/(2·f_vco) at a signed offset in residues: what a line of p² adds to the charge's line.
+    ///
+    /// A pulse from one edge to the other has its charge not at the reference edge but half a pulse from it:
+    /// `∫ e^(−jωt) dt` over it is `τ·(1 − jωτ/2)`, so a pulse of p cycles acts as `p − jω·p²/(2·f_vco)`.
+    fn pulse_position(&self, residue: f64) -> Complex64 {
+        let offset_hz = residue / self.modulator.modulus().get() as f64 * self.pfd_hz;
+        Complex64::new(0.0, -std::f64::consts::TAU * offset_hz / (2.0 * self.vco_hz))
+    }
+}
+
+/// Returns the line of ψ² given the first residue, long randomised sequence: E\[ψ²|u\] is u² − u + ¼ for order 1,
+/// u·(1 − u) for order 2, without a harmonic above.
+fn square_line(order: u8, harmonic: u64) -> f64 {
+    let size = 1.0 / (2.0 * (std::f64::consts::PI * harmonic as f64).powi(2));
+    match order {
+        1 => size,
+        2 => -size,
+        _ => 0.0,
+    }
 }
 
 impl Scratch {
@@ -129,6 +153,12 @@ impl Scratch {
     ) -> Result<Density, LinesError> {
         self.run(config, length)?;
         Ok(fft.density(&self.phase_cycles, settings, &mut self.fft)?)
+    }
+
+    /// Leaves (ψ + a)² in `excess_cycles`.
+    fn square(&mut self, offset_cycles: f64) {
+        self.excess_cycles.clear();
+        self.excess_cycles.extend(self.phase_cycles.iter().map(|phase| (phase + offset_cycles).powi(2)));
     }
 
     /// Leaves g(ψ + a) − ψ in `excess_cycles`.
@@ -168,7 +198,14 @@ fn exact_lines(
             let rest = settle_samples(&scratch.phase_cycles, charge, input.target_cycles)?;
             rest_cycles = Some(rest.offset_cycles);
             scratch.bend(charge, rest.offset_cycles);
-            Some(fft.lines(&scratch.excess_cycles, &mut scratch.fft))
+            let mut excess = fft.lines(&scratch.excess_cycles, &mut scratch.fft);
+            scratch.square(rest.offset_cycles);
+            let squares = fft.lines(&scratch.excess_cycles, &mut scratch.fft);
+            let step = input.modulator.modulus().get() as f64 / period as f64;
+            for (bin, (line, square)) in excess.iter_mut().zip(&squares).enumerate() {
+                *line += input.pulse_position(bin as f64 * step) * square;
+            }
+            Some(excess)
         }
     };
     let line_at = |bin: usize| Line {
@@ -227,6 +264,8 @@ fn curve_lines(input: &LineInput, scratch: &mut Scratch) -> Result<FamilyLines, 
                 Some(lattice) => harmonic_on_lattice(lattice, charge, rest.offset_cycles, tone.harmonic),
                 None => harmonic(&density, charge, rest.offset_cycles, tone.harmonic),
             };
+            let square = square_line(input.modulator.order(), tone.harmonic) + 2.0 * rest.offset_cycles * modulator;
+            let nonlinearity = nonlinearity + input.pulse_position(tone.residue as f64) * square;
             let size = (modulator + nonlinearity).norm();
             let noise = |cycles| line_noise_of(input, folded_cycles2, tone, cycles);
             Line {
@@ -319,7 +358,13 @@ fn windowed_lines(input: &LineInput, scratch: &mut Scratch) -> Result<FamilyLine
             let rest = settle_samples(&scratch.phase_cycles, charge, input.target_cycles)?;
             rest_cycles = Some(rest.offset_cycles);
             scratch.bend(charge, rest.offset_cycles);
-            Some(correlate_each(&scratch.excess_cycles, &residues, m, window))
+            let mut excess = correlate_each(&scratch.excess_cycles, &residues, m, window);
+            scratch.square(rest.offset_cycles);
+            let squares = correlate_each(&scratch.excess_cycles, &residues, m, window);
+            for ((line, square), residue) in excess.iter_mut().zip(&squares).zip(&residues) {
+                *line += input.pulse_position(*residue as f64) * square;
+            }
+            Some(excess)
         }
     };
     let family = phase

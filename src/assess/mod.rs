@@ -6,6 +6,7 @@ mod lines;
 mod listing;
 mod noise;
 mod noise_at;
+mod offset_sweep;
 mod placement;
 mod result;
 mod sequence;
@@ -19,7 +20,8 @@ mod whole_period;
 mod zone;
 
 pub use lines::{FamilyLines, Line, LinesError, PeriodLine, Scratch};
-pub use noise::{ChannelNoise, ModulatorShare, channel_budget};
+pub use noise::{ChannelNoise, ModulatorShare, budget_of, channel_budget};
+pub use offset_sweep::{OffsetSweep, OffsetTried, offset_sweep};
 pub use placement::{Placement, PlacementError, place};
 pub use result::{BoundaryNear, ChannelResult, Contributions, Illegal, Method, Origin, Reason, Rule, Tone, Verdict};
 pub use sequence::{

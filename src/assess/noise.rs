@@ -2,7 +2,7 @@
 
 use std::f64::consts::TAU;
 
-use crate::base::{db_from_power, power_from_db};
+use crate::base::{Frequency, db_from_power, power_from_db};
 use crate::loop_model::{LoopResponse, NoiseBudget, NoiseInput, PhaseFigures, log_grid, noise_budget};
 use crate::plan::ChannelGroup;
 use crate::spectrum::ideal_density;
@@ -79,6 +79,27 @@ pub fn channel_budget(
         folded_rad2_per_hz: folded,
     };
     noise_budget(&input, offset_hz)
+}
+
+/// Returns the noise budget of a channel over its group's integration limits; `None` without a legal
+/// word.
+///
+/// # Errors
+/// As for the channel itself.
+pub fn budget_of(setup: &Setup, group: usize, channel: Frequency) -> Result<Option<NoiseBudget>, AssessError> {
+    let settings = setup.plan().groups.get(group).ok_or(AssessError::NoSuchChannel { group, index: 0 })?;
+    let placement = place(setup.plan(), settings, channel)?;
+    if !placement.illegal.is_empty() {
+        return Ok(None);
+    }
+    let response = setup
+        .response(&placement)
+        .map_err(|source| AssessError::Loop { place: format!("channel {channel}"), source })?;
+    let legal = Legal { setup, group: settings, channel, placement: &placement };
+    let lines = legal.lines(setup.pfd().to_f64_hz(), &mut setup.scratch())?.map(|(_, lines)| lines);
+    let limits = settings.limits.integration_hz;
+    let grid = log_grid(limits.0, limits.1);
+    Ok(Some(channel_budget(setup, &placement, &response, lines.as_ref(), grid)))
 }
 
 /// Returns the phase figures of a channel over the group's integration limits.

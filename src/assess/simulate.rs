@@ -13,7 +13,10 @@ use crate::modulator::{ModulatorConfig, period, start};
 use crate::plan::MismatchPoints;
 use crate::spectrum::{DensitySettings, FftScratch, FftStage, Window, correlate_each, sideband_dbc};
 
+use crate::tones::FamilyTone;
+
 use super::channel::Legal;
+use super::lines::FamilyLines;
 use super::placement::{Placement, place};
 use super::setup::{AssessError, Setup, gain_at, interpolate};
 
@@ -23,6 +26,8 @@ const SETTLE_BANDWIDTHS: f64 = 20.0;
 pub const DEFAULT_CYCLES: u64 = 1 << 20;
 /// Longest segment of the density behind the rms phase.
 const SEGMENT: usize = 1 << 16;
+/// Bins beside a line, clear of the window's main lobe, that tell its floor.
+const BESIDE_BINS: usize = 8;
 
 /// Why a channel cannot be simulated.
 #[derive(Debug, Clone, PartialEq, thiserror::Error)]
@@ -251,41 +256,8 @@ pub fn simulate_channel(
             &mut FftScratch::new(),
         )
         .map_err(|source| AssessError::Lines { channel, source: source.into() })?;
-    let window = if whole.is_some() { Window::Rectangular } else { Window::FourTerm };
-    let m = config.modulus().get();
-    let mut tones = Vec::new();
-    if let Some((family, lines)) = &predicted {
-        let residues: Vec<u64> = family.iter().map(|tone| tone.residue.unsigned_abs()).collect();
-        let seen = correlate_each(&record, &residues, m, window);
-        for ((tone, line), seen) in family.iter().zip(&lines.family).zip(seen) {
-            let offset_hz = tone.residue.unsigned_abs() as f64 / m as f64 * pfd_hz;
-            if offset_hz == 0.0 {
-                continue;
-            }
-            // A mean over the cycle weakens the line by its sinc.
-            let sinc = (PI * offset_hz / pfd_hz).sin() / (PI * offset_hz / pfd_hz);
-            let size = line.nonlinearity.map(|excess| (line.modulator + excess).norm());
-            let predicted_dbc = size.and_then(|size| sideband_dbc(size * stage.response.closed_loop(offset_hz).norm()));
-            let simulated_dbc = sideband_dbc(seen.norm() / sinc);
-            let bandwidth_hz = pfd_hz / record.len() as f64 * window.noise_bandwidth_bins();
-            #[allow(clippy::cast_possible_truncation, clippy::cast_sign_loss, reason = "a bin of the density")]
-            let bin = (offset_hz / pfd_hz * segment as f64).round() as usize;
-            let reach = 2 * window.noise_bandwidth_bins().ceil().max(4.0) as usize;
-            let beside = [bin.saturating_sub(reach).max(1), bin + reach]
-                .into_iter()
-                .filter_map(|bin| density.at_bin(bin))
-                .reduce(f64::min);
-            tones.push(ComparedTone {
-                harmonic: tone.harmonic,
-                offset_hz,
-                predicted_dbc,
-                simulated_dbc,
-                difference_db: predicted_dbc.zip(simulated_dbc).map(|(a, b)| a - b),
-                floor_dbc: beside.and_then(|level| sideband_dbc((level * bandwidth_hz).sqrt())),
-                inside_loop: offset_hz <= edge_hz,
-            });
-        }
-    }
+    let seen = Seen { record: &record, density: &density, segment, whole_periods: whole.is_some() };
+    let tones = predicted.as_ref().map_or_else(Vec::new, |lines| compared_lines(&stage, lines, &seen));
     let reference_tones = reference_lines(&stage, &within, pfd_hz);
     let limits = settings.limits.integration_hz;
     let simulated_rms_deg = rms_deg(&density, segment, pfd_hz, limits);
@@ -306,6 +278,53 @@ pub fn simulate_channel(
         density: thinned(&density, segment, pfd_hz),
         notes,
     })
+}
+
+/// What a simulated record shows.
+struct Seen<'a> {
+    record: &'a [f64],
+    density: &'a crate::spectrum::Density,
+    segment: usize,
+    whole_periods: bool,
+}
+
+/// Returns the lines at the harmonics of K/M, predicted and seen.
+fn compared_lines(stage: &Stage, (family, lines): &(Vec<FamilyTone>, FamilyLines), seen: &Seen) -> Vec<ComparedTone> {
+    let pfd_hz = stage.setup.pfd().to_f64_hz();
+    let edge_hz = stage.response.unity_gain_hz().unwrap_or(pfd_hz / 100.0);
+    let window = if seen.whole_periods { Window::Rectangular } else { Window::FourTerm };
+    let m = stage.placement.modulator.modulus().get();
+    let residues: Vec<u64> = family.iter().map(|tone| tone.residue.unsigned_abs()).collect();
+    let found = correlate_each(seen.record, &residues, m, window);
+    let bandwidth_hz = pfd_hz / seen.record.len() as f64 * window.noise_bandwidth_bins();
+    let mut tones = Vec::new();
+    for ((tone, line), found) in family.iter().zip(&lines.family).zip(found) {
+        let offset_hz = tone.residue.unsigned_abs() as f64 / m as f64 * pfd_hz;
+        if offset_hz == 0.0 {
+            continue;
+        }
+        // A mean over the cycle weakens the line by its sinc.
+        let sinc = (PI * offset_hz / pfd_hz).sin() / (PI * offset_hz / pfd_hz);
+        let size = line.nonlinearity.map(|excess| (line.modulator + excess).norm());
+        let predicted_dbc = size.and_then(|size| sideband_dbc(size * stage.response.closed_loop(offset_hz).norm()));
+        let simulated_dbc = sideband_dbc(found.norm() / sinc);
+        #[allow(clippy::cast_possible_truncation, clippy::cast_sign_loss, reason = "a bin of the density")]
+        let bin = (offset_hz / pfd_hz * seen.segment as f64).round() as usize;
+        let beside = [bin.saturating_sub(BESIDE_BINS).max(1), bin + BESIDE_BINS]
+            .into_iter()
+            .filter_map(|bin| seen.density.at_bin(bin))
+            .reduce(f64::min);
+        tones.push(ComparedTone {
+            harmonic: tone.harmonic,
+            offset_hz,
+            predicted_dbc,
+            simulated_dbc,
+            difference_db: predicted_dbc.zip(simulated_dbc).map(|(a, b)| a - b),
+            floor_dbc: beside.and_then(|level| sideband_dbc((level * bandwidth_hz).sqrt())),
+            inside_loop: offset_hz <= edge_hz,
+        });
+    }
+    tones
 }
 
 fn reference_lines(stage: &Stage, within: &Within, pfd_hz: f64) -> Vec<ComparedTone> {

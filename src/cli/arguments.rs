@@ -129,6 +129,9 @@ pub struct ChannelArguments {
     /// Channel group [default: the first whose range holds the frequency]
     #[arg(long, value_name = "NAME")]
     pub group: Option<String>,
+    /// Folder for the pictures (noise budget with tones, tone against offset current) and channel.json
+    #[arg(long, value_name = "DIR", value_hint = ValueHint::DirPath)]
+    pub out: Option<PathBuf>,
     #[command(flatten)]
     #[allow(missing_docs, reason = "clap shows the options of the group itself")]
     pub common: CommonOptions,

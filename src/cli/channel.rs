@@ -1,9 +1,11 @@
 //! `channel`: one channel in full.
 
-use crate::assess::{ChannelResult, Setup, SpectrumView, spectrum_view};
+use std::path::Path;
+
+use crate::assess::{ChannelResult, Setup, SpectrumView, budget_of, offset_sweep, spectrum_view};
 use crate::base::{Assumption, Dimension, Frequency, parse_quantity};
 use crate::plan::Plan;
-use crate::report::{channel_json, channel_text};
+use crate::report::{add_files, channel_files, channel_json, channel_text, check_target, offset_text};
 
 use super::arguments::ChannelArguments;
 use super::failure::Failure;
@@ -20,6 +22,14 @@ pub fn run(arguments: &ChannelArguments) -> Result<(), Failure> {
     let channel = frequency("FREQUENCY", &arguments.frequency)?;
     let (result, view, assumptions) =
         in_pool(arguments.common.jobs, || assess(&plan, channel, arguments.group.as_deref()))??;
+    if let Some(out) = &arguments.out {
+        write_pictures(
+            &plan,
+            &result,
+            out,
+            &channel_json(&result, view.as_ref(), &assumptions).map_err(report_failure)?,
+        )?;
+    }
     if arguments.common.json {
         output::print(&channel_json(&result, view.as_ref(), &assumptions).map_err(report_failure)?)?;
     } else {
@@ -35,6 +45,20 @@ pub fn run(arguments: &ChannelArguments) -> Result<(), Failure> {
         crate::assess::Verdict::Clear => (0, 0),
     };
     flagged(arguments.common.fail_on, bad, marginal)
+}
+
+/// Writes the pictures of a channel and its figures, and says what an offset current would do.
+fn write_pictures(plan: &Plan, result: &ChannelResult, out: &Path, json: &str) -> Result<(), Failure> {
+    check_target(out).map_err(report_failure)?;
+    let setup = Setup::new(plan).map_err(|error| assess_failure(plan, &error))?;
+    let failed = |error| assess_failure(plan, &error);
+    let budget = budget_of(&setup, result.group_index, result.channel).map_err(failed)?;
+    let sweep = offset_sweep(&setup, result.group_index, result.channel).map_err(failed)?;
+    let files = channel_files(result, budget.as_ref(), sweep.as_ref(), json).map_err(report_failure)?;
+    add_files(out, &files).map_err(report_failure)?;
+    let said = sweep.map_or_else(String::new, |sweep| offset_text(&sweep));
+    output::say(format!("{}pictures and figures are in {}", said, out.display()).trim_start());
+    Ok(())
 }
 
 /// Reads a frequency argument; `argument` names it in messages.

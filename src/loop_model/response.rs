@@ -265,7 +265,7 @@ impl LoopResponse {
     pub fn warnings(&self) -> Vec<String> {
         match self.unity_gain_hz {
             Some(unity) if self.pfd_hz / unity < COMFORTABLE_RATIO => vec![format!(
-                "the loop bandwidth is more than a twentieth of the PFD frequency (ratio {:.2}): sampling lowers the phase margin and the static detector model loses accuracy (Gardner 1980; Hein & Scott 1988)",
+                "the loop bandwidth is more than a twentieth of the PFD frequency (ratio {:.2}): sampling lowers the phase margin (Gardner 1980; Hein & Scott 1988), and the VCO moves between comparisons: mismatch tones may be 1.5 dB off, and an offset current that just clears the pump's kink may no longer clear it",
                 self.pfd_hz / unity
             )],
             _ => Vec::new(),

@@ -2,10 +2,12 @@
 
 use serde::Serialize;
 
-use super::ReportError;
 use super::json::json_text;
-use crate::assess::{ChannelResult, SpectrumView, Tone};
+use super::plots::{budget_svg, offset_svg};
+use super::{ReportError, ReportFile};
+use crate::assess::{ChannelResult, OffsetSweep, SpectrumView, Tone};
 use crate::base::{Assumption, Basis};
+use crate::loop_model::NoiseBudget;
 use crate::plan::Plan;
 
 /// The spectrum part of `channel --json`.
@@ -215,4 +217,48 @@ fn noise_lines(channel: &ChannelResult) -> String {
         text.push_str(&format!("  unknown: {}\n", channel.noise_unknown.join(", ")));
     }
     text
+}
+
+/// Returns the pictures of a channel, `budget.svg` and `offset.svg`, and `channel.json`.
+///
+/// # Errors
+/// `ReportError` where drawing fails.
+pub fn channel_files(
+    channel: &ChannelResult,
+    budget: Option<&NoiseBudget>,
+    sweep: Option<&OffsetSweep>,
+    json: &str,
+) -> Result<Vec<ReportFile>, ReportError> {
+    let pictures = [
+        ("budget.svg", budget.map(|budget| budget_svg(channel, budget)).transpose()?.flatten()),
+        ("offset.svg", sweep.map(offset_svg).transpose()?.flatten()),
+    ];
+    let mut files = vec![ReportFile { path: "channel.json".into(), bytes: json.as_bytes().to_vec() }];
+    for (name, picture) in pictures {
+        files.extend(picture.map(|svg| ReportFile { path: name.into(), bytes: svg.into_bytes() }));
+    }
+    Ok(files)
+}
+
+/// Returns what an offset current would do, in sentences.
+#[must_use]
+pub fn offset_text(sweep: &OffsetSweep) -> String {
+    let at = |current_a: f64| {
+        sweep.tried.iter().min_by(|a, b| (a.current_a - current_a).abs().total_cmp(&(b.current_a - current_a).abs()))
+    };
+    let level = |value: Option<f64>| match value {
+        Some(value) if value > -150.0 => format!("{value:.1} dBc"),
+        Some(_) => "below -150 dBc".to_owned(),
+        None => "none above the tone floor".to_owned(),
+    };
+    let (Some(now), Some(clear)) = (at(0.0), at(sweep.clearing_a)) else { return String::new() };
+    format!(
+        "\noffset current\n  {:.4} uA ({} VCO cycles) keep the pump on one side of its kink\n  nonlinearity at h = 1: {} without, {} with it; reference tone: {} without, {} with it\n",
+        sweep.clearing_a * 1e6,
+        sweep.clearing_cycles,
+        level(now.nonlinearity_dbc),
+        level(clear.nonlinearity_dbc),
+        level(now.reference_dbc),
+        level(clear.reference_dbc),
+    )
 }

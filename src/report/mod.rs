@@ -28,7 +28,7 @@ mod svg_backend;
 mod write;
 
 pub use beats::{beat_files, beats_text};
-pub use channel::{channel_json, channel_text};
+pub use channel::{channel_files, channel_json, channel_text, offset_text};
 pub use columns::{COLUMNS, Cell, Column, channels_csv};
 pub use comparison::{comparison_files, comparison_json, comparison_text};
 pub use difference::{difference_html, difference_json, difference_text};

@@ -360,3 +360,18 @@ fn the_built_in_plan_needs_no_file() {
     assert_eq!(output.status.code(), Some(0), "{}", stderr(&output));
     assert!(folder.path().join("reports/demo/report.html").exists());
 }
+
+#[test]
+fn channel_draws_its_budget_and_what_an_offset_current_does() {
+    let folder = with_plan(PLAN);
+    let output = run_in(folder.path(), &["channel", "plan.toml", "1.70802 GHz", "--out", "pictures", "--json"]);
+    assert_eq!(output.status.code(), Some(0), "{}", stderr(&output));
+    for name in ["budget.svg", "offset.svg", "channel.json"] {
+        assert!(fs::metadata(folder.path().join("pictures").join(name)).unwrap().len() > 1000, "{name}");
+    }
+    let json: Value = serde_json::from_str(&stdout(&output)).unwrap();
+    assert!(json["assumptions"].as_array().unwrap().iter().any(|a| a["key"] == "loop.design_divider"));
+    // Order 3 clears its kink at 2 cycles: 2·I/(N + K/M) = 2 · 2 mA / 85.401.
+    let said = stderr(&output);
+    assert!(said.contains("46.8379 uA (2 VCO cycles)"), "{said}");
+}

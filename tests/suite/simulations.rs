@@ -6,8 +6,8 @@ use rand::rngs::StdRng;
 use rand::{RngExt, SeedableRng};
 use rayon::prelude::*;
 use thornmap::loop_model::{
-    FilterDesign, FilterNetwork, LoopPoint, LoopResponse, SimulatedDetector, Simulation, SimulationInput,
-    reference_tone_dbc,
+    FilterComponents, FilterDesign, FilterNetwork, LoopPoint, LoopResponse, SimulatedDetector, Simulation,
+    SimulationInput, reference_tone_dbc,
 };
 use thornmap::modulator::{Dither, ModulatorConfig, ModulatorSettings, Modulus, Structure, phase_numerators, start};
 use thornmap::spectrum::{Window, correlate, sideband_dbc};
@@ -177,6 +177,91 @@ fn a_small_step_settles_as_the_linear_loop_does() {
 }
 
 #[test]
+fn settling_agrees_with_the_step_response_of_scipy() {
+    // tests/data/settling_reference.py: scipy.signal.step of E(s).
+    let path = concat!(env!("CARGO_MANIFEST_DIR"), "/tests/data/settling_reference.json");
+    let data: serde_json::Value = serde_json::from_str(&std::fs::read_to_string(path).unwrap()).unwrap();
+    let number = |value: &serde_json::Value| value.as_f64().unwrap();
+    let (pfd_hz, divider) = (40e6, number(&data["divider"]));
+    let mut checked = 0;
+    for case in data["loops"].as_array().unwrap() {
+        let c = &case["components"];
+        let ladder: Vec<(f64, f64)> =
+            c["ladder"].as_array().unwrap().iter().map(|rc| (number(&rc[0]), number(&rc[1]))).collect();
+        let components = FilterComponents {
+            c1_farad: Some(number(&c["c1"])),
+            r2_ohm: number(&c["r2"]),
+            c2_farad: number(&c["c2"]),
+            r3_c3: ladder.first().copied(),
+            r4_c4: ladder.get(1).copied(),
+        };
+        let network = FilterNetwork::new(&components).unwrap();
+        let input = SimulationInput {
+            network: &network,
+            gain_hz_per_v: number(&data["gain"]),
+            pfd_hz,
+            target_hz: divider * pfd_hz,
+            detector: ideal(),
+            start_error_hz: -1e4,
+            start_phase_cycles: 0.0,
+        };
+        let samples = Simulation::new(input, Box::new(|| 0.0)).unwrap().transient(80 * 40).unwrap();
+        for (i, wanted) in case["error"].as_array().unwrap().iter().enumerate() {
+            let seen = samples[i * 40].frequency_hz / -1e4;
+            assert!((seen - number(wanted)).abs() < 0.02, "{i} us: {seen} against {wanted}");
+            checked += 1;
+        }
+    }
+    assert_eq!(checked, 3 * 81);
+}
+
+#[test]
+fn the_command_compares_and_settles() {
+    let plan = concat!(env!("CARGO_MANIFEST_DIR"), "/configs/demo.toml");
+    let folder = tempfile::TempDir::new().unwrap();
+    let run = |arguments: &[&str]| {
+        assert_cmd::Command::cargo_bin("thornmap")
+            .unwrap()
+            .current_dir(folder.path())
+            .args(["simulate", plan])
+            .args(arguments)
+            .output()
+            .unwrap()
+    };
+    let output = run(&["433.0875 MHz", "--cycles", "131072", "--out", "set", "--json", "--quiet"]);
+    assert_eq!(output.status.code(), Some(0), "{}", String::from_utf8_lossy(&output.stderr));
+    let found: serde_json::Value = serde_json::from_slice(&output.stdout).unwrap();
+    assert_eq!(found["schema"], "thornmap.simulation/1");
+    let first = &found["tones"][0];
+    assert_eq!(first["harmonic"], 1);
+    // A cut record of this length knows the line to about 1 dB.
+    assert!(first["difference_db"].as_f64().unwrap().abs() < 1.0, "{first}");
+    let rms = &found["rms_phase_deg"];
+    let ratio = rms["predicted"].as_f64().unwrap() / rms["simulated"].as_f64().unwrap();
+    assert!((ratio - 1.0).abs() < 0.1, "{rms}");
+    assert_eq!(std::fs::read(folder.path().join("set/simulation.json")).unwrap(), output.stdout);
+    assert!(folder.path().join("set/simulation.svg").exists());
+    let output = run(&["440.5 MHz", "--step", "5 MHz", "--tolerance", "100 Hz", "--out", "set", "--json", "--quiet"]);
+    let found: serde_json::Value = serde_json::from_slice(&output.stdout).unwrap();
+    assert_eq!(found["schema"], "thornmap.settling/1");
+    let settled_s = found["settled_after_s"].as_f64().unwrap();
+    assert!(settled_s > 20e-6 && settled_s < 200e-6, "{settled_s}");
+    assert!(folder.path().join("set/settling.svg").exists());
+    for (arguments, said) in [
+        (vec!["440.5 MHz", "--step", "0 Hz"], "settles at once"),
+        (vec!["440.5 MHz", "--step", "5"], "unit"),
+        (vec!["440.5 MHz", "--cycles", "10"], "10"),
+        (vec!["440.5 MHz", "--tolerance", "1 Hz"], "--step"),
+        (vec!["900 MHz"], "no group holds"),
+    ] {
+        let output = run(&arguments);
+        let message = String::from_utf8_lossy(&output.stderr).into_owned();
+        assert_eq!(output.status.code(), Some(2), "{message}");
+        assert!(message.contains(said), "{message}");
+    }
+}
+
+#[test]
 fn a_large_step_slips_cycles_and_still_locks() {
     let (divider, pfd_hz) = (90.0, 20e6);
     let network = network(divider, (None, None));
@@ -256,9 +341,8 @@ fn cases(count: usize, ratios: (f64, f64)) -> Vec<Case> {
         .collect()
 }
 
-/// Returns predicted and simulated level of the strongest line in the loop of a case, and whether the static model was
-/// claimed.
-fn compared(case: &Case, cycles: u64) -> Option<(f64, f64)> {
+/// Returns a case simulated.
+fn simulated(case: &Case, cycles: u64) -> thornmap::assess::SimulatedChannel {
     let pfd_hz = 20e6;
     let text = format!(
         r#"schema = 1
@@ -285,6 +369,8 @@ largest_q = 1
 harmonics = 3
 [[channels]]
 list = ["{} Hz"]
+[analysis]
+record = 2097152
 "#,
         case.order,
         case.modulus,
@@ -296,41 +382,113 @@ list = ["{} Hz"]
     let plan = thornmap::plan::parse_plan(&text, "case", &|_| Err("none".to_owned())).unwrap();
     let setup = thornmap::assess::Setup::new(&plan).unwrap();
     let channel = plan.groups[0].channels.get(0).unwrap();
-    let found = thornmap::assess::simulate_channel(&setup, 0, channel, Some(cycles), &|_| {}).unwrap();
-    found
+    thornmap::assess::simulate_channel(&setup, 0, channel, Some(cycles), &|_| {}).unwrap()
+}
+
+/// Returns predicted and simulated level of the strongest line in the loop of a case; `None` where the static model is
+/// not claimed or the line does not stand clear of the noise.
+fn compared(case: &Case, cycles: u64) -> Option<(f64, f64)> {
+    let found = simulated(case, cycles);
+    let strongest = found
         .tones
         .iter()
         .filter(|tone| tone.inside_loop)
-        .filter_map(|tone| tone.predicted_dbc.zip(tone.simulated_dbc))
-        .max_by(|a, b| a.1.total_cmp(&b.1))
+        .max_by(|a, b| a.simulated_dbc.unwrap_or(-999.0).total_cmp(&b.simulated_dbc.unwrap_or(-999.0)))?;
+    let (predicted, simulated) = strongest.predicted_dbc.zip(strongest.simulated_dbc)?;
+    // Over whole periods both are exact; in a cut record a line must stand clear of the noise to have a level.
+    let clear = found.whole_periods || strongest.floor_dbc.is_some_and(|floor| simulated - floor > 25.0);
+    clear.then_some((predicted, simulated))
 }
 
-/// Holds the cases against the simulation; returns how many were judged and every one that differs by more than 0.5 dB.
-fn held(cases: &[Case], cycles: u64) -> (usize, Vec<String>) {
-    let found: Vec<Option<Result<(), String>>> = cases
+/// A judged case: predicted and simulated level.
+struct Judged<'a> {
+    case: &'a Case,
+    predicted: f64,
+    simulated: f64,
+}
+
+impl Judged<'_> {
+    fn is_off(&self) -> bool {
+        (self.predicted - self.simulated).abs() > 0.5
+    }
+
+    fn text(&self) -> String {
+        let case = self.case;
+        format!(
+            "order {}, {:.2} %, {:.1} uA, {}/{}, ratio {:.1}: predicted {:.2}, simulated {:.2}",
+            case.order,
+            case.mismatch_percent,
+            case.offset_ua,
+            case.k,
+            case.modulus,
+            case.ratio,
+            self.predicted,
+            self.simulated
+        )
+    }
+}
+
+/// Returns every case whose strongest line in the loop is simulated above −75 dBc.
+fn judged(cases: &[Case], cycles: u64) -> Vec<Judged<'_>> {
+    cases
         .par_iter()
-        .map(|case| {
+        .filter_map(|case| {
             let (predicted, simulated) = compared(case, cycles)?;
-            if simulated < -75.0 {
-                return None;
-            }
-            let text = format!(
-                "order {}, {:.2} %, {:.1} uA, {}/{}, ratio {:.1}: predicted {predicted:.2}, simulated {simulated:.2}",
-                case.order, case.mismatch_percent, case.offset_ua, case.k, case.modulus, case.ratio
-            );
-            Some(if (predicted - simulated).abs() <= 0.5 { Ok(()) } else { Err(text) })
+            (simulated >= -75.0).then_some(Judged { case, predicted, simulated })
         })
-        .collect();
-    let judged: Vec<Result<(), String>> = found.into_iter().flatten().collect();
-    (judged.len(), judged.into_iter().filter_map(Result::err).collect())
+        .collect()
+}
+
+/// Returns whether the long checks are asked for.
+fn is_long() -> bool {
+    std::env::var_os("THORNMAP_LONG").is_some()
 }
 
 #[test]
 fn predictions_hold_against_the_simulation() {
-    let is_long = std::env::var_os("THORNMAP_LONG").is_some();
-    let (count, cycles) = if is_long { (90, 1 << 20) } else { (12, 1 << 17) };
-    let (judged, off) = held(&cases(count, (25.0, 120.0)), cycles);
-    println!("{judged} judged, off: {off:#?}");
-    assert!(judged >= count / 3, "{judged}");
-    assert!(off.is_empty(), "{off:#?}");
+    // Orders 1 to 3, f_pfd/f_c from 25 to 120. No exception is known here: order 1 is judged by its modulator lines, the
+    // static model not being claimed where they are strong.
+    let (count, cycles, least) = if is_long() { (170, 1 << 21, 60) } else { (14, 1 << 18, 4) };
+    let cases = cases(count, (25.0, 120.0));
+    let judged = judged(&cases, cycles);
+    assert!(judged.len() >= least, "{}", judged.len());
+    let off: Vec<String> = judged.iter().filter(|case| case.is_off()).map(Judged::text).collect();
+    assert!(off.is_empty(), "{} judged, off: {off:#?}", judged.len());
+}
+
+#[test]
+fn predictions_with_a_wide_loop_hold_but_for_the_known_exceptions() {
+    // f_pfd/f_c from 10 to 20, through the sampled H. The VCO's own phase moves between comparisons, so the detector
+    // sees φ minus that movement: a wider spread than the static model's. Two exceptions follow, and no other: mismatch
+    // tones up to 1.5 dB off, and an offset current that would just clear the kink no longer clears it.
+    let (count, cycles, least) = if is_long() { (45, 1 << 21, 15) } else { (8, 1 << 18, 2) };
+    let cases = cases(count, (10.0, 20.0));
+    let judged = judged(&cases, cycles);
+    assert!(judged.len() >= least, "{}", judged.len());
+    let held = judged.iter().filter(|case| !case.is_off()).count();
+    assert!(held >= least / 3, "{held} of {}", judged.len());
+    for case in judged.iter().filter(|case| case.is_off()) {
+        let at_the_kink = case.case.order >= 2 && case.case.offset_ua > 20.0;
+        let is_known = at_the_kink || (case.predicted - case.simulated).abs() < 1.5;
+        assert!(is_known && case.simulated > case.predicted, "{}", case.text());
+    }
+}
+
+#[test]
+fn lines_of_order_four_by_the_width_of_the_pulses_are_predicted() {
+    // A matched pump has no mismatch tone; what is left comes from charge that is spread over the pulse: −jω·p²/(2·f_vco).
+    let mut checked = 0;
+    for k in [51u64, 77, 131, 217] {
+        let case = Case { order: 4, mismatch_percent: 0.0, offset_ua: 0.0, modulus: 1 << 13, k, ratio: 200.0 };
+        let found = simulated(&case, 1 << 17);
+        let floor = found.tones.iter().map(|tone| tone.floor_dbc.unwrap()).fold(f64::INFINITY, f64::min);
+        for tone in &found.tones {
+            let (predicted, seen) = (tone.predicted_dbc.unwrap(), tone.simulated_dbc.unwrap());
+            if seen > floor - 10.0 {
+                assert!((predicted - seen).abs() < 0.5, "k {k}: {tone:?}");
+                checked += 1;
+            }
+        }
+    }
+    assert!(checked >= 6, "{checked}");
 }

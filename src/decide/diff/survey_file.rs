@@ -180,7 +180,9 @@ pub fn parse_survey(bytes: &[u8]) -> Result<SurveyFile, SurveyFileError> {
     let text = text.trim_start_matches('\u{feff}');
     // The whole text is checked before anything is kept of it.
     let head: Head = serde_json::from_str(text).map_err(|error| {
-        if error.is_eof() && !text.trim().is_empty() {
+        // A cut inside a number is an error of syntax to the parser: an object that does not end is cut off as well.
+        let is_open = text.trim_start().starts_with('{') && !text.trim_end().ends_with('}');
+        if (error.is_eof() && !text.trim().is_empty()) || (error.is_syntax() && is_open) {
             SurveyFileError::Truncated { line: error.line() }
         } else if error.is_data() {
             SurveyFileError::NotASurvey { found: "it is no JSON object with a schema".to_owned() }

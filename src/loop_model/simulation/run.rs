@@ -108,7 +108,7 @@ impl<'a> Simulation<'a> {
         each!(&mut machine, m => {
             for n in 0..settle + cycles {
                 let result = if n >= first_within {
-                    if (n - first_within) % part_cycles == 0 {
+                    if (n - first_within).is_multiple_of(part_cycles) {
                         parts.push([Complex64::ZERO; 3]);
                     }
                     let last = parts.len() - 1;
@@ -120,7 +120,7 @@ impl<'a> Simulation<'a> {
                     m.cycle(&mut *phases, |_, _, _, _, _| {})
                 };
                 result.map_err(|found_hz| SimulationError::RanAway { found_hz, cycles: n })?;
-                if !(m.state.phase_cycles.abs() < 1e9) {
+                if m.state.phase_cycles.is_nan() || m.state.phase_cycles.abs() > 1e9 {
                     return Err(SimulationError::RanAway { found_hz: target_hz + m.frequency_hz(), cycles: n });
                 }
                 if n >= settle {

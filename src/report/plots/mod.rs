@@ -1,6 +1,7 @@
 //! The plots of a report set, each a picture with its own words.
 
 mod boundaries;
+mod channel;
 mod frame;
 mod margins;
 mod sequence;
@@ -8,6 +9,7 @@ mod simulation;
 mod spectrum;
 mod tone_map;
 
+pub(crate) use channel::{budget_svg, offset_svg};
 pub(crate) use sequence::sequence_svg;
 pub(crate) use simulation::{settling_svg, simulation_svg};
 
