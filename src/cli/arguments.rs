@@ -35,6 +35,8 @@ pub enum Command {
     Identify(IdentifyArguments),
     /// List the fewest channels to measure that show everything the verdicts rely on
     Measure(MeasureArguments),
+    /// Feed measured tones back: residuals, fitted anchors and mismatch with intervals, a plan with them
+    Calibrate(CalibrateArguments),
     /// Write words, avoided ranges and driver test vectors for firmware
     Export(ExportArguments),
     /// Show what changed between two surveys, and which inputs changed with it
@@ -407,6 +409,28 @@ pub struct SimulateArguments {
     /// Folder for the picture and the figures
     #[arg(long, value_name = "DIR", value_hint = ValueHint::DirPath)]
     pub out: Option<PathBuf>,
+    /// Print the result as JSON on standard output, and nothing else there
+    #[arg(long)]
+    pub json: bool,
+    /// No messages on standard error unless something fails
+    #[arg(long, short)]
+    pub quiet: bool,
+}
+
+/// Arguments of `calibrate`.
+#[derive(Debug, Args)]
+pub struct CalibrateArguments {
+    /// Plan file (TOML)
+    #[arg(value_name = "PLAN", value_hint = ValueHint::FilePath)]
+    pub plan: PathBuf,
+    /// Measured tones (csv with a head: channel, offset, level, rbw, note, group; the first three required). Cells carry
+    /// units: 433.2 MHz, 7.5 kHz, -52 dBc; "< -80 dBc" is an upper bound, an empty level was not measured; with ; between
+    /// the cells decimal commas are accepted. `measure` writes such a table to be filled in
+    #[arg(value_name = "MEASURED", value_hint = ValueHint::FilePath)]
+    pub measured: PathBuf,
+    /// Write the plan with the fitted figures, basis "measured"; all else stays as typed
+    #[arg(long, value_name = "FILE", value_hint = ValueHint::FilePath)]
+    pub write_plan: Option<PathBuf>,
     /// Print the result as JSON on standard output, and nothing else there
     #[arg(long)]
     pub json: bool,

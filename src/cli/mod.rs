@@ -1,6 +1,7 @@
 //! Arguments and printing; the work is done by the stages before.
 
 mod arguments;
+mod calibrate;
 mod channel;
 mod compare;
 mod diff;
@@ -47,6 +48,7 @@ fn dispatch(command: &Command) -> Result<(), Failure> {
         Command::Compare(arguments) => compare::run(arguments),
         Command::Remedy(arguments) => remedy::run(arguments),
         Command::Simulate(arguments) => simulate::run(arguments),
+        Command::Calibrate(arguments) => calibrate::run(arguments),
         Command::Identify(arguments) => identify::run(arguments),
         Command::Diff(arguments) => diff::run(arguments),
         Command::Measure(arguments) => measure::run(arguments),

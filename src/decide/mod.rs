@@ -1,5 +1,6 @@
 //! What follows from the stages before: which cause, which choice, which cure.
 
+pub mod calibrate;
 pub mod compare;
 pub mod diff;
 pub mod export;

@@ -1,6 +1,7 @@
 //! The report set: pure bytes from one survey result, and the one place that writes them to a folder.
 
 mod beats;
+mod calibration;
 mod channel;
 mod columns;
 mod comparison;
@@ -28,6 +29,7 @@ mod svg_backend;
 mod write;
 
 pub use beats::{beat_files, beats_text};
+pub use calibration::{calibrated_plan, calibration_json, calibration_text};
 pub use channel::{channel_files, channel_json, channel_text, offset_text};
 pub use columns::{COLUMNS, Cell, Column, channels_csv};
 pub use comparison::{comparison_files, comparison_json, comparison_text};

@@ -3,6 +3,7 @@
 #![allow(clippy::unwrap_used, reason = "a test fails by panicking")]
 
 mod beats;
+mod calibrations;
 mod cli;
 mod comparisons;
 mod diffs;
