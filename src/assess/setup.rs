@@ -8,11 +8,14 @@ use crate::base::{Assumption, Basis, Exact, ExactError, Frequency};
 use crate::loop_model::{FilterComponents, FilterNetwork, LoopModelError, LoopPoint, LoopResponse, OscillatorNoise};
 use crate::plan::{Anchor, AnchorPlace, Gain, LoopPlan, Plan};
 use crate::spectrum::FftStage;
-use crate::tones::{AnchorLevel, Mechanism, Transfer, nearest_fraction};
+use crate::tones::{AnchorLevel, Mechanism, Transfer, fitted_anchors, nearest_fraction};
 
 use super::lines::{LinesError, Scratch};
 use super::placement::{Placement, PlacementError, place};
 use super::verdict::hertz;
+
+/// Distance from the fit above which anchors of one coupling are said not to agree \[dB\].
+const WIDE_SPREAD_DB: f64 = 3.0;
 
 /// Why a plan is refused as a whole.
 #[derive(Debug, Clone, PartialEq, thiserror::Error)]
@@ -94,6 +97,7 @@ pub struct Setup<'p> {
     clock_anchors: Vec<Option<AnchorLevel>>,
     fft: FftStage,
     warnings: Vec<String>,
+    fits: Vec<Assumption>,
 }
 
 impl<'p> Setup<'p> {
@@ -135,6 +139,7 @@ impl<'p> Setup<'p> {
             anchors: Vec::new(),
             clock_anchors: Vec::new(),
             fft: FftStage::new(),
+            fits: Vec::new(),
         };
         setup.carry_anchors()?;
         setup.warnings.extend(unused(plan));
@@ -167,6 +172,7 @@ impl<'p> Setup<'p> {
             anchors: self.anchors.clone(),
             clock_anchors: self.clock_anchors.clone(),
             fft: FftStage::new(),
+            fits: self.fits.clone(),
         })
     }
 
@@ -260,6 +266,7 @@ impl<'p> Setup<'p> {
                 Basis::Default,
             );
         }
+        list.extend(self.fits.iter().cloned());
         list.extend(self.extrapolated());
         list
     }
@@ -335,7 +342,25 @@ impl<'p> Setup<'p> {
                 None => None,
             });
         }
-        self.anchors = anchors;
+        let fitted = fitted_anchors(&anchors);
+        for anchor in fitted.iter().filter(|anchor| anchor.count > 1) {
+            let (mechanism, q) = (anchor.level.mechanism, anchor.level.q);
+            let name = format!("{mechanism:?}").to_lowercase();
+            let fit = format!(
+                "{} anchors of one coupling fitted: {:.2} dBc where the first was taken, each within {:.2} dB of the fit",
+                anchor.count, anchor.level.level_dbc, anchor.spread_db
+            );
+            if anchor.spread_db > WIDE_SPREAD_DB {
+                self.warnings.push(format!("the anchors of {name}, q = {q}, do not agree: {fit}"));
+            }
+            self.fits.push(Assumption {
+                key: format!("anchor ({name}, q = {q})"),
+                value: fit,
+                basis: anchor.level.basis,
+                note: None,
+            });
+        }
+        self.anchors = fitted.into_iter().map(|anchor| anchor.level).collect();
         self.clock_anchors = clock_anchors;
         Ok(())
     }

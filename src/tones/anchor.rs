@@ -83,9 +83,73 @@ impl AnchorLevel {
     }
 }
 
+/// Several anchors of one path and boundary denominator as one.
+#[derive(Debug, Clone, Copy, PartialEq)]
+pub struct FittedAnchor {
+    /// The anchor that stands for all, where the first was taken.
+    pub level: AnchorLevel,
+    /// How many it stands for.
+    pub count: usize,
+    /// Largest distance of one of them from the fit \[dB\].
+    pub spread_db: f64,
+}
+
+/// Returns the anchors with those of one path and q fitted to one: its level is the least-squares one in decibels, each
+/// carried to the place of the first by the loop's transfer; its roll-off the mean. One coupling has one level: two
+/// measurements of it must not add.
+#[must_use]
+pub fn fitted_anchors(anchors: &[AnchorLevel]) -> Vec<FittedAnchor> {
+    let mut fitted: Vec<FittedAnchor> = Vec::new();
+    for (i, first) in anchors.iter().enumerate() {
+        let is_same = |other: &AnchorLevel| other.mechanism == first.mechanism && other.q == first.q;
+        if anchors[..i].iter().any(is_same) {
+            continue;
+        }
+        let same: Vec<&AnchorLevel> = anchors[i..].iter().filter(|other| is_same(other)).collect();
+        // What the first alone predicts where each was taken, against what was seen there.
+        let residuals: Vec<f64> =
+            same.iter().filter_map(|other| Some(other.level_dbc - first.level_dbc_at(1, &other.taken_at)?)).collect();
+        let count = residuals.len().max(1) as f64;
+        let shift_db = residuals.iter().sum::<f64>() / count;
+        let spread_db = residuals.iter().map(|r| (r - shift_db).abs()).fold(0.0, f64::max);
+        let level = AnchorLevel {
+            level_dbc: first.level_dbc + shift_db,
+            roll_off_db: same.iter().map(|other| other.roll_off_db).sum::<f64>() / same.len() as f64,
+            basis: same.iter().map(|other| other.basis).max().unwrap_or(first.basis),
+            ..*first
+        };
+        fitted.push(FittedAnchor { level, count: same.len(), spread_db });
+    }
+    fitted
+}
+
 #[cfg(test)]
 mod tests {
     use super::*;
+
+    #[test]
+    fn anchors_of_one_coupling_are_fitted_and_do_not_add() {
+        let at =
+            |offset_hz: f64, closed_loop: f64| Transfer { offset_hz, closed_loop, error: 0.1, output_divider: 1.0 };
+        let anchor = |level_dbc: f64, q: u64, taken_at: Transfer| AnchorLevel {
+            mechanism: Mechanism::Detector,
+            level_dbc,
+            q,
+            roll_off_db: 2.0,
+            basis: Basis::Measured,
+            taken_at,
+        };
+        // Half the transfer explains 6.02 dB; what is left differs by 2 dB: the mean is 1 dB above the first.
+        let fitted = fitted_anchors(&[
+            anchor(-50.0, 1, at(1e4, 1.0)),
+            anchor(-70.0, 2, at(1e4, 1.0)),
+            anchor(-50.0 - 6.0206 + 2.0, 1, at(1e5, 0.5)),
+        ]);
+        assert_eq!(fitted.iter().map(|f| f.count).collect::<Vec<_>>(), [2, 1]);
+        assert!((fitted[0].level.level_dbc + 49.0).abs() < 1e-4);
+        assert!((fitted[0].spread_db - 1.0).abs() < 1e-4);
+        assert_eq!((fitted[1].level.level_dbc, fitted[1].spread_db), (-70.0, 0.0));
+    }
 
     #[test]
     fn each_path_follows_its_own_transfer() {

@@ -14,7 +14,7 @@ mod curve_settle;
 mod curve_uncertainty;
 mod family;
 
-pub use anchor::{AnchorLevel, Mechanism, Transfer};
+pub use anchor::{AnchorLevel, FittedAnchor, Mechanism, Transfer, fitted_anchors};
 pub use boundary::{NearFraction, nearest_fraction, signed_residue};
 pub use clock::{Carriers, ClockPath, ClockTone, clock_tones};
 pub use combine::worst_case_sum_dbc;

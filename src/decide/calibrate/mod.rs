@@ -123,8 +123,16 @@ fn level(volts: f64) -> f64 {
 /// `AssessError` where the plan as a whole is refused.
 pub fn calibrate(plan: &Plan, measured: &[Measured]) -> Result<Calibration, AssessError> {
     let setup = Setup::new(plan)?;
+    // Anchors of one path and q are one coupling: the first stands for all of them.
+    let twin = |i: usize, j: usize| {
+        plan.anchors[i].mechanism == plan.anchors[j].mechanism && plan.anchors[i].q == plan.anchors[j].q
+    };
     let alone = (0..plan.anchors.len())
-        .map(|i| Plan { anchors: vec![plan.anchors[i].clone()], ..plan.clone() })
+        .map(|i| {
+            let is_first = (0..i).all(|j| !twin(i, j));
+            let own = (0..plan.anchors.len()).filter(|j| is_first && twin(i, *j));
+            Plan { anchors: own.map(|j| plan.anchors[j].clone()).collect(), ..plan.clone() }
+        })
         .collect::<Vec<Plan>>();
     let alone_setups = alone.iter().map(Setup::new).collect::<Result<Vec<_>, _>>()?;
     let mut rows = Vec::new();
@@ -250,14 +258,15 @@ fn by_mechanism(rows: &[CalibratedRow]) -> Vec<MechanismResidual> {
         .collect()
 }
 
-/// Fits what the rows tell: shifts of anchors and of the mismatch \[dB\].
-fn fit(plan: &Plan, parts: &[Parts], calibration: &mut Calibration) {
+/// Returns the name of parameter `i`: an anchor, or the mismatch after them.
+fn key_of(anchors: usize, i: usize) -> String {
+    if i < anchors { format!("anchor {} level", i + 1) } else { "detector.mismatch".to_owned() }
+}
+
+/// Returns the parameters that the rows tell, and notes why each of the others is left.
+fn told(plan: &Plan, parts: &[Parts], planned: Option<f64>, calibration: &mut Calibration) -> Vec<usize> {
     let anchors = plan.anchors.len();
-    let planned = match &plan.detector.mismatch {
-        Some(MismatchPoints::Constant(value)) if *value != 0.0 => Some(*value),
-        _ => None,
-    };
-    let name = |i: usize| if i < anchors { format!("anchor {} level", i + 1) } else { "detector.mismatch".to_owned() };
+    let name = |i: usize| key_of(anchors, i);
     let share = |part: &Parts, i: usize| {
         let volts = if i < anchors { part.coupling[i] } else { part.nonlinearity };
         volts / (part.coupling.iter().sum::<f64>() + part.nonlinearity + part.rest)
@@ -289,6 +298,17 @@ fn fit(plan: &Plan, parts: &[Parts], calibration: &mut Calibration) {
             None => chosen.push(i),
         }
     }
+    chosen
+}
+
+/// Fits what the rows tell: shifts of anchors and of the mismatch \[dB\].
+fn fit(plan: &Plan, parts: &[Parts], calibration: &mut Calibration) {
+    let anchors = plan.anchors.len();
+    let planned = match &plan.detector.mismatch {
+        Some(MismatchPoints::Constant(value)) if *value != 0.0 => Some(*value),
+        _ => None,
+    };
+    let chosen = told(plan, parts, planned, calibration);
     if chosen.is_empty() {
         return;
     }
@@ -325,7 +345,7 @@ fn fit(plan: &Plan, parts: &[Parts], calibration: &mut Calibration) {
         let figure = if *i < anchors {
             let planned = plan.anchors[*i].level_dbc;
             FittedFigure {
-                key: name(*i),
+                key: key_of(anchors, *i),
                 anchor: Some(*i),
                 planned,
                 fitted: planned + shift,
@@ -337,7 +357,7 @@ fn fit(plan: &Plan, parts: &[Parts], calibration: &mut Calibration) {
             let at = |db: f64| planned * power_from_db(db).sqrt();
             let (a, b) = (at(shift - half), at(shift + half));
             FittedFigure {
-                key: name(*i),
+                key: key_of(anchors, *i),
                 anchor: None,
                 planned,
                 fitted: at(*shift),
