@@ -60,6 +60,8 @@ const HINTS: &[(&str, &str, &str)] = &[
     ("modulator", "ntf", "[3, -3, 1]"),
     ("modulator", "runs_at_zero", "false"),
     ("detector", "offset_current", "\"0 uA\""),
+    ("detector", "offset_time", "\"400 ps\""),
+    ("detector", "offset_share", "\"2 %\""),
     ("detector", "dead_zone", "\"0 ps\""),
     ("detector", "quadratic", "0"),
     ("detector", "cubic", "0"),

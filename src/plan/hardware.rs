@@ -110,14 +110,14 @@ pub fn divider(reader: &mut Reader, section: &Section) -> Divider {
 }
 
 /// Reads `[detector]`.
-pub fn detector(reader: &mut Reader, section: &Section, load: Load) -> Option<Detector> {
+pub fn detector(reader: &mut Reader, section: &Section, load: Load, pfd_hz: Option<f64>) -> Option<Detector> {
     let current = reader.real(section, "current");
     let mismatch = reader.quantity_or_pairs(section, "mismatch");
     if let Some(found) = &mismatch {
         check_mismatch(reader, section, found);
     }
     let table = section.value("table").and_then(|_| charge_table(reader, section, load));
-    let offset_current_a = reader.real(section, "offset_current").unwrap_or(0.0);
+    let offset_current_a = offset_current(reader, section, current, pfd_hz);
     let leakage_a = reader.real(section, "leakage");
     let dead_zone_s = reader.real(section, "dead_zone").unwrap_or(0.0);
     let quadratic_per_cycle = reader.number(section, "quadratic").map_or(0.0, |found| found.value);
@@ -147,6 +147,24 @@ pub fn detector(reader: &mut Reader, section: &Section, load: Load) -> Option<De
         flicker_dbc_per_hz,
         maximum_frequency,
     })
+}
+
+/// The offset current: as a current, as the static time error t it makes (I = I_cp·t·f_pfd), or as a share of I_cp.
+fn offset_current(reader: &mut Reader, section: &Section, current_a: Option<f64>, pfd_hz: Option<f64>) -> f64 {
+    let names = ["offset_current", "offset_time", "offset_share"];
+    let given: Vec<&str> = names.into_iter().filter(|name| section.value(name).is_some()).collect();
+    if let [first, second, ..] = given.as_slice() {
+        let span = section.value(second).map_or_else(|| section.head(), toml::Spanned::span);
+        reader.problem(&section.key(second), &span, format!("give {first} or {second}, not both"));
+        return 0.0;
+    }
+    // A plan without a pump current or a reference is refused elsewhere.
+    let (current_a, pfd_hz) = (current_a.unwrap_or(0.0), pfd_hz.unwrap_or(0.0));
+    match given.first() {
+        Some(&"offset_time") => reader.real(section, "offset_time").unwrap_or(0.0) * pfd_hz * current_a,
+        Some(&"offset_share") => reader.real(section, "offset_share").unwrap_or(0.0) * current_a,
+        _ => reader.real(section, "offset_current").unwrap_or(0.0),
+    }
 }
 
 /// A mismatch of 200 % and more would turn a source off or round.

@@ -158,6 +158,8 @@ pub const KEYS: &[Key] = &[
     .or("unknown: nonlinearity null, never 0 %"),
     key("detector", "offset_current", Quantity(Current, Any), "offset current, positive discharges the filter")
         .or("0 A"),
+    key("detector", "offset_time", Quantity(Time, Any), "offset current as the static time error it makes, instead"),
+    key("detector", "offset_share", Quantity(Ratio, Any), "offset current as a share of the pump current, instead"),
     key("detector", "leakage", Quantity(Current, Any), "leakage at the tuning node, positive discharges")
         .or("unknown: reference tone null"),
     key("detector", "dead_zone", Quantity(Time, NotNegative), "half width of the dead zone").or("0 s"),

@@ -80,7 +80,8 @@ fn read(reader: &mut Reader, root: &DeTable, text: &str, stem: &str, load: Load)
     let found = section(reader, "modulator");
     let modulator = modulator(reader, &found);
     let found = section(reader, "detector");
-    let detector = detector(reader, &found, load);
+    let pfd_hz = reference.as_ref().and_then(|reference| reference.pfd().ok()).map(|pfd| pfd.to_f64_hz());
+    let detector = detector(reader, &found, load, pfd_hz);
     let over_voltage = detector.as_ref().is_some_and(|d| matches!(d.mismatch, Some(MismatchPoints::Table(_))));
     if let Some(mismatch) = found.value("mismatch").filter(|_| over_voltage && !has_tuning) {
         let text = "a mismatch over tuning voltage needs oscillator.tuning";
@@ -95,7 +96,6 @@ fn read(reader: &mut Reader, root: &DeTable, text: &str, stem: &str, load: Load)
     let anchors: Vec<_> = many(reader, root, "anchor").iter().map(|s| anchor(reader, s, first_output)).collect();
     let victims: Vec<_> = many(reader, root, "victim").iter().map(|s| victim(reader, s)).collect();
     let clocks: Vec<_> = many(reader, root, "clock").iter().map(|s| clock(reader, s, first_output)).collect();
-    let pfd_hz = reference.as_ref().and_then(|reference| reference.pfd().ok()).map(|pfd| pfd.to_f64_hz());
     let found = section(reader, "limits");
     let limits: Limits = limits(reader, &found, pfd_hz, None);
     let groups: Vec<_> = many(reader, root, "channels")

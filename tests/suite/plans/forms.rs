@@ -221,3 +221,16 @@ fn problems_are_drawn_under_their_lines() {
 fn a_byte_order_mark_and_foreign_line_ends_are_read() {
     valid(&format!("\u{feff}{}", PLAIN.replace('\n', "\r\n")));
 }
+
+#[test]
+fn an_offset_current_may_be_a_time_or_a_share() {
+    let offset = |typed: &str| {
+        valid(&changed("current = \"1 mA\"", &format!("current = \"1 mA\"\n{typed}"))).detector.offset_current_a
+    };
+    assert!((offset("offset_current = \"40 uA\"") / 40e-6 - 1.0).abs() < 1e-12);
+    assert!((offset("offset_share = \"4 %\"") / 40e-6 - 1.0).abs() < 1e-12);
+    // The charge of 40 uA over a cycle of 1/f_pfd is that of 1 mA over a twenty-fifth of it.
+    let pfd_hz = valid(&changed("current = \"1 mA\"", "current = \"1 mA\"")).reference.pfd().unwrap().to_f64_hz();
+    let time_ps = 1e12 / pfd_hz / 25.0;
+    assert!((offset(&format!("offset_time = \"{time_ps} ps\"")) / 40e-6 - 1.0).abs() < 1e-9);
+}

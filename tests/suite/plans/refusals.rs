@@ -231,6 +231,12 @@ const STRUCTURE: &[Case] = &[
         "oscillator.leeson.loaded_q",
         &["above zero"],
     ),
+    (
+        "current = \"1 mA\"",
+        "current = \"1 mA\"\noffset_current = \"1 uA\"\noffset_share = @\"2 %\"",
+        "detector.offset_share",
+        &["not both"],
+    ),
     ("record = 4096", "record = 4096\n[alternatives]\norders = [2, @7]", "alternatives.orders", &["7", "5"]),
     ("record = 4096", "record = 4096\n[alternatives]\ndoubler = [@1]", "alternatives.doubler", &["true or false"]),
     ("record = 4096", "record = 4096\n[alternatives]\ndithers = [@\"loud\"]", "alternatives.dithers", &["loud"]),
