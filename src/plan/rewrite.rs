@@ -11,6 +11,8 @@ pub enum Place {
     AnchorLevel(usize),
     /// `detector.mismatch`.
     Mismatch,
+    /// `detector.offset_current`.
+    OffsetCurrent,
 }
 
 /// Returns the text with each place's value replaced by the given TOML; a place that the text does not hold is left out.
@@ -37,9 +39,14 @@ fn span_of(root: &DeTable, place: &Place) -> Option<Range<usize>> {
             },
             _ => None,
         },
-        Place::Mismatch => match root.get("detector")?.get_ref() {
-            DeValue::Table(detector) => Some(detector.get("mismatch")?.span()),
-            _ => None,
-        },
+        Place::Mismatch => detector_span(root, "mismatch"),
+        Place::OffsetCurrent => detector_span(root, "offset_current"),
+    }
+}
+
+fn detector_span(root: &DeTable, key: &str) -> Option<Range<usize>> {
+    match root.get("detector")?.get_ref() {
+        DeValue::Table(detector) => Some(detector.get(key)?.span()),
+        _ => None,
     }
 }

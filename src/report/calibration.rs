@@ -16,26 +16,25 @@ fn level(value: Option<f64>) -> String {
     value.map_or_else(|| "-".to_owned(), |value| format!("{value:.2}"))
 }
 
-fn figure(figure: &FittedFigure) -> String {
-    let (low, high) = figure.interval;
-    if figure.unit == "ratio" {
-        format!(
-            "{}: {:.3} % (95 % interval {:.3} % to {:.3} %), planned {:.3} %",
-            figure.key,
-            figure.fitted * 100.0,
-            low * 100.0,
-            high * 100.0,
-            figure.planned * 100.0
-        )
-    } else {
-        format!(
-            "{}: {:.2} {u} (95 % interval {low:.2} to {high:.2} {u}), planned {:.2} {u}",
-            figure.key,
-            figure.fitted,
-            figure.planned,
-            u = figure.unit
-        )
+/// Returns the factor and the unit in which a plan gives a figure.
+fn unit_of(figure: &FittedFigure) -> (f64, &'static str) {
+    match figure.unit {
+        "ratio" => (100.0, "%"),
+        "A" => (1e6, "uA"),
+        _ => (1.0, "dBc"),
     }
+}
+
+fn figure(figure: &FittedFigure) -> String {
+    let (scale, unit) = unit_of(figure);
+    format!(
+        "{}: {:.3} {unit} (95 % interval {:.3} to {:.3} {unit}), planned {:.3} {unit}",
+        figure.key,
+        figure.fitted * scale,
+        figure.interval.0 * scale,
+        figure.interval.1 * scale,
+        figure.planned * scale
+    )
 }
 
 /// Returns a calibration for a terminal.
@@ -125,24 +124,14 @@ pub fn calibrated_plan(text: &str, found: &Calibration) -> String {
         .fitted
         .iter()
         .map(|figure| {
-            let (low, high) = figure.interval;
-            match figure.anchor {
-                Some(index) => {
-                    let note = format!("calibrated from {rows} rows, 95 % interval {low:.2} to {high:.2} dBc");
-                    let value =
-                        format!("{{ value = \"{:.3} dBc\", basis = \"measured\", note = \"{note}\" }}", figure.fitted);
-                    (Place::AnchorLevel(index), value)
-                }
-                None => {
-                    let (low, high) = (low * 100.0, high * 100.0);
-                    let note = format!("calibrated from {rows} rows, 95 % interval {low:.3} to {high:.3} %");
-                    let value = format!(
-                        "{{ value = \"{:.4} %\", basis = \"measured\", note = \"{note}\" }}",
-                        figure.fitted * 100.0
-                    );
-                    (Place::Mismatch, value)
-                }
-            }
+            let (scale, unit) = unit_of(figure);
+            let (low, high) = (figure.interval.0 * scale, figure.interval.1 * scale);
+            let note = format!("calibrated from {rows} rows, 95 % interval {low:.3} to {high:.3} {unit}");
+            let value = figure.fitted * scale;
+            (
+                figure.place.clone(),
+                format!("{{ value = \"{value:.4} {unit}\", basis = \"measured\", note = \"{note}\" }}"),
+            )
         })
         .collect();
     rewritten(text, &changes)

@@ -205,13 +205,15 @@ fn tone_line(tone: &Tone) -> String {
 
 fn noise_lines(channel: &ChannelResult) -> String {
     let mut text = format!(
-        "\nphase error (rms)\n  noise {}, with tones {}, known part {}\n  jitter {}, residual FM {}, EVM floor {}\n",
+        "\nphase error (rms)\n  noise {}, with tones {}, known part {}\n  jitter {}, residual FM {}, EVM floor {} with tones, {} by noise alone\n",
         figure(channel.phase_error_deg, 4, "deg"),
         figure(channel.phase_error_with_tones_deg, 4, "deg"),
         figure(channel.phase_error_known_deg, 4, "deg"),
         figure(channel.jitter_s.map(|s| s * 1e12), 4, "ps"),
         figure(channel.residual_fm_hz, 2, "Hz"),
-        figure(channel.evm_percent, 3, "%")
+        figure(channel.evm_percent, 3, "%"),
+        // EVM floor: 100 · rms phase in radians.
+        figure(channel.phase_error_deg.map(|deg| 100.0 * deg.to_radians()), 3, "%")
     );
     if !channel.noise_unknown.is_empty() {
         text.push_str(&format!("  unknown: {}\n", channel.noise_unknown.join(", ")));
@@ -253,12 +255,14 @@ pub fn offset_text(sweep: &OffsetSweep) -> String {
     };
     let (Some(now), Some(clear)) = (at(0.0), at(sweep.clearing_a)) else { return String::new() };
     format!(
-        "\noffset current\n  {:.4} uA ({} VCO cycles) keep the pump on one side of its kink\n  nonlinearity at h = 1: {} without, {} with it; reference tone: {} without, {} with it\n",
+        "\noffset current\n  {:.4} uA ({} VCO cycles) keep the pump on one side of its kink\n  nonlinearity at h = 1: {} without, {} with it; reference tone: {} without, {} with it\n  known phase error {} without, {} with it\n",
         sweep.clearing_a * 1e6,
         sweep.clearing_cycles,
         level(now.nonlinearity_dbc),
         level(clear.nonlinearity_dbc),
         level(now.reference_dbc),
         level(clear.reference_dbc),
+        figure(now.phase_error_known_deg, 4, "deg"),
+        figure(clear.phase_error_known_deg, 4, "deg"),
     )
 }

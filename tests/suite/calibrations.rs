@@ -183,3 +183,25 @@ fn the_command_writes_a_plan_that_check_accepts() {
     assert_eq!(output.status.code(), Some(2));
     assert!(String::from_utf8_lossy(&output.stderr).contains("column level: missing"));
 }
+
+#[test]
+fn an_offset_current_is_fitted_where_the_rows_tell_it() {
+    // Order 3, offset a good part of the way to the clear side, where the tone falls steeply with it. No coupling: either
+    // the current is fitted, or it is said that the rows cannot tell it from the mismatch; the rows are met both ways.
+    let with = |current: &str| {
+        let text =
+            text("\"-150 dBc\"", "\"3 %\"").replace("leakage =", &format!("offset_current = \"{current}\"\nleakage ="));
+        parse_plan(&text, "bench", &|_| Err("none".to_owned())).unwrap()
+    };
+    let rows = true_rows(&with("31 uA"));
+    let found = calibrate(&with("30 uA"), &rows).unwrap();
+    let names: Vec<&str> = found.fitted.iter().map(|figure| figure.key.as_str()).collect();
+    assert!(
+        names.contains(&"detector.offset_current")
+            || found.not_fitted.iter().any(|why| why.contains("detector.offset_current: the rows cannot tell it from")),
+        "{found:?}"
+    );
+    for row in found.rows.iter().filter(|row| row.unused.is_none()) {
+        assert!((row.fitted_dbc.unwrap() - row.measured_dbc).abs() < 0.3, "{row:?}");
+    }
+}

@@ -8,12 +8,14 @@ use serde::Serialize;
 
 use crate::assess::{AssessError, Setup, Tone};
 use crate::base::{Frequency, db_from_power, power_from_db};
-use crate::plan::{Measured, MismatchPoints, Plan};
+use crate::plan::{Measured, MismatchPoints, Place, Plan};
 
 use solve::fitted;
 
 /// Share of a tone's voltage from which a row tells anything of a parameter.
 const LEAST_SHARE: f64 = 0.05;
+/// Step of the offset current by which its effect is found.
+const OFFSET_STEP: f64 = 1.05;
 /// Two parameters whose rows are this much alike cannot be told apart.
 const ALIKE: f64 = 0.995;
 
@@ -63,15 +65,16 @@ pub struct MechanismResidual {
 pub struct FittedFigure {
     /// `anchor 1 level`, `detector.mismatch`.
     pub key: String,
-    /// Index of the anchor from 0; `None` for the mismatch.
-    pub anchor: Option<usize>,
+    /// Where it stands in the plan.
+    #[serde(skip)]
+    pub place: Place,
     /// Value in the plan (dBc, or a ratio).
     pub planned: f64,
     /// Fitted value.
     pub fitted: f64,
     /// 95 % interval.
     pub interval: (f64, f64),
-    /// `dBc` or `ratio`.
+    /// `dBc`, `ratio` or `A`.
     pub unit: &'static str,
 }
 
@@ -100,6 +103,8 @@ struct Parts {
     /// By anchor.
     coupling: Vec<f64>,
     nonlinearity: f64,
+    /// How the nonlinearity part moves with the offset current \[dB a dB\].
+    offset_slope: f64,
     rest: f64,
     measured_dbc: f64,
     is_bound: bool,
@@ -117,7 +122,8 @@ fn level(volts: f64) -> f64 {
 ///
 /// Parts on one offset add as voltages in phase, as in every prediction of this program; measured levels scatter evenly
 /// in decibels. An upper bound counts only where the fit passes it. The nonlinearity part is taken as proportional to
-/// the mismatch.
+/// the mismatch, and to a power of the offset current that a small step of it shows: far from the plan's value calibrate
+/// the written plan once more.
 ///
 /// # Errors
 /// `AssessError` where the plan as a whole is refused.
@@ -135,6 +141,8 @@ pub fn calibrate(plan: &Plan, measured: &[Measured]) -> Result<Calibration, Asse
         })
         .collect::<Vec<Plan>>();
     let alone_setups = alone.iter().map(Setup::new).collect::<Result<Vec<_>, _>>()?;
+    let stepped = stepped_offsets(plan);
+    let stepped_setups = stepped.iter().map(Setup::new).collect::<Result<Vec<_>, _>>()?;
     let mut rows = Vec::new();
     let mut parts = Vec::new();
     let mut covered = Covered::default();
@@ -162,17 +170,18 @@ pub fn calibrate(plan: &Plan, measured: &[Measured]) -> Result<Calibration, Asse
                     .known_level_dbc
                     .map(|predicted| row.level_dbc - predicted)
                     .filter(|residual| !row.is_bound || *residual < 0.0);
-                let mut coupling = Vec::with_capacity(alone_setups.len());
-                for alone in &alone_setups {
-                    let result = alone.assess(group, place, row.channel, &mut alone.scratch())?;
-                    let same = result.tones.iter().find(|other| (other.offset_hz - tone.offset_hz).abs() < 1e-6);
-                    coupling.push(voltage(same.and_then(|other| other.contributions.coupling_dbc)));
-                }
+                let at = (group, place, row.channel, tone.offset_hz);
+                let coupling = parts_on(&alone_setups, at, |tone| tone.contributions.coupling_dbc)?;
+                let stepped_dbc = parts_on(&stepped_setups, at, |tone| tone.contributions.nonlinearity_dbc)?;
                 let c = &tone.contributions;
                 parts.push(Parts {
                     row: index,
-                    coupling,
+                    coupling: coupling.into_iter().map(voltage).collect(),
                     nonlinearity: voltage(c.nonlinearity_dbc),
+                    offset_slope: match stepped_dbc.as_slice() {
+                        [Some(low), Some(high)] => (high - low) / (2.0 * level(OFFSET_STEP)),
+                        _ => 0.0,
+                    },
                     rest: voltage(c.modulator_dbc) + voltage(c.leakage_dbc) + voltage(c.clock_dbc),
                     measured_dbc: row.level_dbc,
                     is_bound: row.is_bound,
@@ -193,6 +202,37 @@ pub fn calibrate(plan: &Plan, measured: &[Measured]) -> Result<Calibration, Asse
     };
     fit(plan, &parts, &mut calibration);
     Ok(calibration)
+}
+
+/// Returns one part of the tone at an offset \[Hz\] of a channel, for each of several plans.
+fn parts_on(
+    setups: &[Setup],
+    (group, place, channel, offset_hz): (usize, u64, Frequency, f64),
+    part: impl Fn(&Tone) -> Option<f64>,
+) -> Result<Vec<Option<f64>>, AssessError> {
+    setups
+        .iter()
+        .map(|setup| {
+            let result = setup.assess(group, place, channel, &mut setup.scratch())?;
+            Ok(result.tones.iter().find(|other| (other.offset_hz - offset_hz).abs() < 1e-6).and_then(&part))
+        })
+        .collect()
+}
+
+/// Returns the plan with a slightly smaller and a slightly larger offset current; none without one.
+fn stepped_offsets(plan: &Plan) -> Vec<Plan> {
+    let current_a = plan.detector.offset_current_a;
+    if current_a == 0.0 {
+        return Vec::new();
+    }
+    [1.0 / OFFSET_STEP, OFFSET_STEP]
+        .into_iter()
+        .map(|factor| {
+            let mut stepped = plan.clone();
+            stepped.detector.offset_current_a = current_a * factor;
+            stepped
+        })
+        .collect()
 }
 
 /// A tone with its group, place and output divider, or why there is none.
@@ -260,7 +300,11 @@ fn by_mechanism(rows: &[CalibratedRow]) -> Vec<MechanismResidual> {
 
 /// Returns the name of parameter `i`: an anchor, or the mismatch after them.
 fn key_of(anchors: usize, i: usize) -> String {
-    if i < anchors { format!("anchor {} level", i + 1) } else { "detector.mismatch".to_owned() }
+    match i.checked_sub(anchors) {
+        None => format!("anchor {} level", i + 1),
+        Some(0) => "detector.mismatch".to_owned(),
+        Some(_) => "detector.offset_current".to_owned(),
+    }
 }
 
 /// Returns the parameters that the rows tell, and notes why each of the others is left.
@@ -268,18 +312,25 @@ fn told(plan: &Plan, parts: &[Parts], planned: Option<f64>, calibration: &mut Ca
     let anchors = plan.anchors.len();
     let name = |i: usize| key_of(anchors, i);
     let share = |part: &Parts, i: usize| {
-        let volts = if i < anchors { part.coupling[i] } else { part.nonlinearity };
+        let volts = match i.checked_sub(anchors) {
+            None => part.coupling[i],
+            Some(0) => part.nonlinearity,
+            Some(_) => part.nonlinearity * part.offset_slope,
+        };
         volts / (part.coupling.iter().sum::<f64>() + part.nonlinearity + part.rest)
     };
     let column = |i: usize| -> Vec<f64> { parts.iter().filter(|p| !p.is_bound).map(|p| share(p, i)).collect() };
     let mut chosen: Vec<usize> = Vec::new();
-    for i in 0..=anchors {
+    for i in 0..anchors + 2 {
+        if i == anchors + 1 && plan.detector.offset_current_a == 0.0 {
+            continue;
+        }
         if i == anchors && planned.is_none() {
             calibration.not_fitted.push("detector.mismatch: the plan gives no single value other than 0".to_owned());
             continue;
         }
         let own = column(i);
-        if own.iter().all(|share| *share < LEAST_SHARE) {
+        if own.iter().all(|share| share.abs() < LEAST_SHARE) {
             calibration.not_fitted.push(format!("{}: no measured tone depends on it", name(i)));
             continue;
         }
@@ -287,7 +338,7 @@ fn told(plan: &Plan, parts: &[Parts], planned: Option<f64>, calibration: &mut Ca
         let twin = chosen.iter().find(|j| {
             let other = column(**j);
             let dot: f64 = own.iter().zip(&other).map(|(a, b)| a * b).sum();
-            dot / (size(&own) * size(&other)) > ALIKE
+            (dot / (size(&own) * size(&other))).abs() > ALIKE
         });
         match twin {
             Some(j) => calibration.not_fitted.push(format!(
@@ -299,6 +350,13 @@ fn told(plan: &Plan, parts: &[Parts], planned: Option<f64>, calibration: &mut Ca
         }
     }
     chosen
+}
+
+/// Returns a figure that was fitted as a factor in decibels.
+fn scaled(key: String, place: Place, planned: f64, (shift, half): (f64, f64), unit: &'static str) -> FittedFigure {
+    let at = |db: f64| planned * power_from_db(db).sqrt();
+    let (a, b) = (at(shift - half), at(shift + half));
+    FittedFigure { key, place, planned, fitted: at(shift), interval: (a.min(b), a.max(b)), unit }
 }
 
 /// Fits what the rows tell: shifts of anchors and of the mismatch \[dB\].
@@ -313,16 +371,19 @@ fn fit(plan: &Plan, parts: &[Parts], calibration: &mut Calibration) {
         return;
     }
     let shifted = |part: &Parts, shifts: &[f64]| -> (f64, Vec<f64>) {
-        let mut volts = part.rest + part.nonlinearity + part.coupling.iter().sum::<f64>();
-        let mut terms = Vec::with_capacity(chosen.len());
-        for (i, shift) in chosen.iter().zip(shifts) {
-            let base = if *i < anchors { part.coupling[*i] } else { part.nonlinearity };
-            let now = base * power_from_db(*shift).sqrt();
-            volts += now - base;
-            terms.push(now);
-        }
+        let by = |i: usize| chosen.iter().position(|c| *c == i).map_or(0.0, |place| shifts[place]);
+        let coupling: Vec<f64> =
+            part.coupling.iter().enumerate().map(|(i, volts)| volts * power_from_db(by(i)).sqrt()).collect();
+        let bent_db = by(anchors) + part.offset_slope * by(anchors + 1);
+        let nonlinearity = part.nonlinearity * power_from_db(bent_db).sqrt();
+        let volts = part.rest + nonlinearity + coupling.iter().sum::<f64>();
         // d(20·log10 V)/d(shift) is the term's share.
-        (level(volts), terms.into_iter().map(|term| term / volts).collect())
+        let slope = |i: &usize| match i.checked_sub(anchors) {
+            None => coupling[*i] / volts,
+            Some(0) => nonlinearity / volts,
+            Some(_) => part.offset_slope * nonlinearity / volts,
+        };
+        (level(volts), chosen.iter().map(slope).collect())
     };
     let model = |shifts: &[f64]| {
         parts
@@ -342,27 +403,24 @@ fn fit(plan: &Plan, parts: &[Parts], calibration: &mut Calibration) {
         calibration.rows[part.row].fitted_dbc = Some(shifted(part, &found.values).0);
     }
     for ((i, shift), half) in chosen.iter().zip(&found.values).zip(&found.half_widths) {
-        let figure = if *i < anchors {
-            let planned = plan.anchors[*i].level_dbc;
-            FittedFigure {
-                key: key_of(anchors, *i),
-                anchor: Some(*i),
-                planned,
-                fitted: planned + shift,
-                interval: (planned + shift - half, planned + shift + half),
-                unit: "dBc",
+        let key = key_of(anchors, *i);
+        let figure = match i.checked_sub(anchors) {
+            None => {
+                let planned = plan.anchors[*i].level_dbc;
+                let interval = (planned + shift - half, planned + shift + half);
+                FittedFigure {
+                    key,
+                    place: Place::AnchorLevel(*i),
+                    planned,
+                    fitted: planned + shift,
+                    interval,
+                    unit: "dBc",
+                }
             }
-        } else {
-            let planned = planned.unwrap_or(0.0);
-            let at = |db: f64| planned * power_from_db(db).sqrt();
-            let (a, b) = (at(shift - half), at(shift + half));
-            FittedFigure {
-                key: key_of(anchors, *i),
-                anchor: None,
-                planned,
-                fitted: at(*shift),
-                interval: (a.min(b), a.max(b)),
-                unit: "ratio",
+            Some(0) => scaled(key, Place::Mismatch, planned.unwrap_or(0.0), (*shift, *half), "ratio"),
+            Some(_) => {
+                let current_a = plan.detector.offset_current_a;
+                scaled(key, Place::OffsetCurrent, current_a, (*shift, *half), "A")
             }
         };
         calibration.fitted.push(figure);
