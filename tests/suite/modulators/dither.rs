@@ -16,7 +16,7 @@ fn dithered(structure: Structure, order: u8, seeds: &[u64], dither: (u8, u8, u64
     }
 }
 
-/// Source: ITU-T O.150 §5.1 (published transcription) and computed: x^9 + x^5 + 1 from all ones.
+/// Source: ITU-T O.150 §5.1 (published text) and computed: x^9 + x^5 + 1 from all ones.
 #[test]
 fn nine_bit_register_from_all_ones() {
     let mut register = Register::new(9, 511).unwrap();
