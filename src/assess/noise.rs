@@ -4,6 +4,7 @@ use std::f64::consts::TAU;
 
 use crate::base::{Frequency, db_from_power, power_from_db};
 use crate::loop_model::{LoopResponse, NoiseBudget, NoiseInput, PhaseFigures, log_grid, noise_budget};
+use crate::modulator::ModulatorConfig;
 use crate::plan::ChannelGroup;
 use crate::spectrum::ideal_density;
 
@@ -54,7 +55,8 @@ pub fn channel_budget(
     let vco_hz = placement.vco.to_f64_hz();
     let pfd_hz = setup.pfd().to_f64_hz();
     let order = placement.modulator.order();
-    let shaped = |offset: f64| ideal_density(order, offset, pfd_hz);
+    let shaped =
+        |offset: f64| ideal_density(order, offset, pfd_hz) + dither_density(&placement.modulator, offset, pfd_hz);
     let is_dense = lines.is_some_and(|lines| lines.period.is_none());
     // (2π)²·S_0/f_pfd turns cycles² per line spacing into rad²/Hz.
     let folded = lines
@@ -79,6 +81,15 @@ pub fn channel_budget(
         folded_rad2_per_hz: folded,
     };
     noise_budget(&input, offset_hz)
+}
+
+/// Returns the dither's own phase noise \[rad²/Hz, single sideband\]: a fair bit of weight w at stage r,
+/// `(2π)²·w²/(4·M²·f_pfd)·[2 sin(πf/f_pfd)]^(2(r − 2))`.
+fn dither_density(modulator: &ModulatorConfig, offset_hz: f64, pfd_hz: f64) -> f64 {
+    let Some((stage, weight)) = modulator.dither().stage_and_weight() else { return 0.0 };
+    let step = weight as f64 / modulator.modulus().get() as f64;
+    let shape = 2.0 * (std::f64::consts::PI * offset_hz / pfd_hz).sin();
+    TAU * TAU * step * step / (4.0 * pfd_hz) * shape.powi(2 * (i32::from(stage) - 2))
 }
 
 /// Returns the noise budget of a channel over its group's integration limits; `None` without a legal

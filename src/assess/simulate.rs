@@ -181,7 +181,8 @@ impl<'a> Stage<'a> {
             network,
             gain_hz_per_v: self.gain_hz_per_v,
             pfd_hz: self.setup.pfd().to_f64_hz(),
-            target_hz: self.placement.divider_ratio() * self.setup.pfd().to_f64_hz(),
+            // With dither at the first stage the mean, and so the target, is not N + K/M.
+            target_hz: self.placement.vco.to_f64_hz(),
             detector: self.detector,
             start_error_hz,
             start_phase_cycles,
@@ -190,7 +191,7 @@ impl<'a> Stage<'a> {
     }
 }
 
-/// Returns φ of the modulator \[cycles\], output by output: Σ(y − K/M), exact in its whole part.
+/// Returns φ of the modulator \[cycles\], output by output: Σ(y − mean), exact in its whole part.
 fn phases(config: &ModulatorConfig) -> Box<dyn FnMut() -> f64> {
     let mut modulator = start(config);
     let (k, m) = (config.k(), config.modulus().get());
@@ -199,6 +200,7 @@ fn phases(config: &ModulatorConfig) -> Box<dyn FnMut() -> f64> {
     let mut place = buffer.len();
     // φ·M modulo M is the ramp −n·K: whole cycles and ramp are kept apart, so nothing grows.
     let (mut whole, mut ramp) = (0i64, 0u64);
+    let (shift, mut count) = (config.mean_shift().to_f64(), 0.0);
     Box::new(move || {
         if place == buffer.len() {
             modulator.fill(&mut buffer);
@@ -211,7 +213,8 @@ fn phases(config: &ModulatorConfig) -> Box<dyn FnMut() -> f64> {
             ramp -= m;
             whole -= 1;
         }
-        whole as f64 - ramp as f64 * scale
+        count += 1.0;
+        whole as f64 - ramp as f64 * scale - shift * count
     })
 }
 
@@ -331,6 +334,8 @@ fn reference_lines(stage: &Stage, within: &Within, pfd_hz: f64) -> Vec<ComparedT
     let current_a = stage.setup.plan().detector.current_a;
     let predicted = |harmonic: u64| {
         let network = stage.setup.network()?;
+        // Unknown leakage: an unknown tone, although 0 A is simulated.
+        stage.setup.plan().detector.leakage_a?;
         reference_tone_dbc(network, stage.detector.drain_a, current_a, stage.gain_hz_per_v, pfd_hz, harmonic)
     };
     (1u64..)

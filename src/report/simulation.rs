@@ -61,7 +61,7 @@ pub fn simulation_text(plan: &Plan, found: &SimulatedChannel) -> String {
     text
 }
 
-/// Returns the text of `simulate --json`.
+/// Returns the text of `simulate --json`; `settled_after_s` is the time that was dropped before the record, 20/f_c.
 ///
 /// # Errors
 /// `NotFinite`, `Serialize`.
@@ -109,10 +109,11 @@ pub fn settling_text(plan: &Plan, found: &Settling) -> String {
         |s| format!("stays within it after {}", with_prefix(s, "s", 5)),
     );
     format!(
-        "{}: channel {} reached from {} below (noise sources and modulator off)\ntolerance {} at the output: {settled}\ncomparison cycles lost on the way: {}\n",
+        "{}: channel {} reached from {} {} (noise sources and modulator off)\ntolerance {} at the output: {settled}\ncomparison cycles lost on the way: {}\n",
         plan.identity.title,
         found.channel,
-        with_prefix(found.step_hz, "Hz", 6),
+        with_prefix(found.step_hz.abs(), "Hz", 6),
+        if found.step_hz > 0.0 { "below" } else { "above" },
         with_prefix(found.tolerance_hz, "Hz", 4),
         found.slips.abs()
     )

@@ -389,11 +389,11 @@ record = 2097152
 /// not claimed or the line does not stand clear of the noise.
 fn compared(case: &Case, cycles: u64) -> Option<(f64, f64)> {
     let found = simulated(case, cycles);
-    let strongest = found
-        .tones
-        .iter()
-        .filter(|tone| tone.inside_loop)
-        .max_by(|a, b| a.simulated_dbc.unwrap_or(-999.0).total_cmp(&b.simulated_dbc.unwrap_or(-999.0)))?;
+    // The strongest by either route: a line that one of them overstates is judged as well.
+    let size = |tone: &thornmap::assess::ComparedTone| {
+        tone.predicted_dbc.unwrap_or(-999.0).max(tone.simulated_dbc.unwrap_or(-999.0))
+    };
+    let strongest = found.tones.iter().filter(|tone| tone.inside_loop).max_by(|a, b| size(a).total_cmp(&size(b)))?;
     let (predicted, simulated) = strongest.predicted_dbc.zip(strongest.simulated_dbc)?;
     // Over whole periods both are exact; in a cut record a line must stand clear of the noise to have a level.
     let clear = found.whole_periods || strongest.floor_dbc.is_some_and(|floor| simulated - floor > 25.0);
@@ -428,13 +428,13 @@ impl Judged<'_> {
     }
 }
 
-/// Returns every case whose strongest line in the loop is simulated above −75 dBc.
+/// Returns every case whose strongest line in the loop is predicted or simulated above −75 dBc.
 fn judged(cases: &[Case], cycles: u64) -> Vec<Judged<'_>> {
     cases
         .par_iter()
         .filter_map(|case| {
             let (predicted, simulated) = compared(case, cycles)?;
-            (simulated >= -75.0).then_some(Judged { case, predicted, simulated })
+            (predicted.max(simulated) >= -75.0).then_some(Judged { case, predicted, simulated })
         })
         .collect()
 }
@@ -466,7 +466,7 @@ fn predictions_with_a_wide_loop_hold_but_for_the_known_exceptions() {
     let judged = judged(&cases, cycles);
     assert!(judged.len() >= least, "{}", judged.len());
     let held = judged.iter().filter(|case| !case.is_off()).count();
-    assert!(held >= least / 3, "{held} of {}", judged.len());
+    assert!(2 * held >= judged.len(), "{held} of {}", judged.len());
     for case in judged.iter().filter(|case| case.is_off()) {
         let at_the_kink = case.case.order >= 2 && case.case.offset_ua > 20.0;
         let is_known = at_the_kink || (case.predicted - case.simulated).abs() < 1.5;
@@ -491,4 +491,23 @@ fn lines_of_order_four_by_the_width_of_the_pulses_are_predicted() {
         }
     }
     assert!(checked >= 6, "{checked}");
+}
+
+#[test]
+fn the_noise_of_dither_at_the_first_stage_is_predicted() {
+    // M = 2^16: the dither's own noise rises towards the carrier as 1/f² and is a good part of the phase error here.
+    let text = std::fs::read_to_string(concat!(env!("CARGO_MANIFEST_DIR"), "/configs/demo.toml")).unwrap();
+    let run = |more: &str| {
+        let text = text
+            .replace("modulus = \"2^24\"", &format!("modulus = \"2^16\"\n{more}"))
+            .replace("integration = [\"100 Hz\", \"9.6 MHz\"]", "integration = [\"2 kHz\", \"20 kHz\"]");
+        let plan = thornmap::plan::parse_plan(&text, "demo", &|_| Err("none".to_owned())).unwrap();
+        let setup = thornmap::assess::Setup::new(&plan).unwrap();
+        let channel = plan.groups[1].channels.get(60).unwrap();
+        let found = thornmap::assess::simulate_channel(&setup, 1, channel, Some(1 << 20), &|_| {}).unwrap();
+        (found.predicted_rms_deg.unwrap(), found.simulated_rms_deg)
+    };
+    let (predicted, simulated) = run("dither = { stage = 1, register = 23, seed = 1, weight = 1 }");
+    assert!((predicted / simulated - 1.0).abs() < 0.05, "{predicted} against {simulated}");
+    assert!(simulated > 1.15 * run("").1);
 }
