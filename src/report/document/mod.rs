@@ -180,11 +180,13 @@ pub(crate) fn document<'a>(
     }
 }
 
-/// Returns the page's conventions that the result does not state in its own words, then the result's.
+/// Returns the page's conventions that the result does not state in its own words, then the result's; what is unknown is
+/// told in the page's words, since the result speaks of keys.
 fn all_conventions(result: &SurveyResult) -> Vec<(String, &'static str)> {
-    let stated = |name: &str| result.conventions.iter().any(|(own, _)| own.trim_end_matches('s') == name);
+    let own = || result.conventions.iter().filter(|(name, _)| *name != "unknown");
+    let stated = |name: &str| own().any(|(own, _)| own.trim_end_matches('s') == name);
     let page = CONVENTIONS.into_iter().filter(|(name, _)| !stated(name)).map(|(name, text)| (name.to_owned(), text));
-    page.chain(result.conventions.iter().map(|(name, text)| (name.replace('_', " "), *text))).collect()
+    page.chain(own().map(|(name, text)| (name.replace('_', " "), *text))).collect()
 }
 
 /// Returns what the verdict rests on in one sentence.

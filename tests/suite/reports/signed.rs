@@ -70,7 +70,7 @@ fn proofs_hold_when_done_again() {
     let plan = thornmap::plan::demo_plan();
     let result = survey(&plan, &|_| {}).unwrap();
     let html = text(&render(&result, &ALL).unwrap(), "report.html");
-    let (mut words, mut residues) = (0, 0);
+    let (mut words, mut residues) = (0u64, 0);
     for proof in html.split("<div class=\"proof\">").skip(1) {
         let lines: Vec<String> = proof
             .split("</div>")
@@ -114,7 +114,7 @@ fn proofs_hold_when_done_again() {
             }
         }
     }
-    assert_eq!(words as u64, result.summary.bad + result.summary.marginal);
+    assert_eq!(words, result.summary.bad + result.summary.marginal);
     assert!(residues >= 20, "{residues}");
 }
 
