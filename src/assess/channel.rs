@@ -8,7 +8,7 @@ use crate::spectrum::{divided_dbc, sideband_dbc};
 use crate::tones::{Charge, FamilyTone, modulator_family, nearest_fraction};
 
 use super::candidate::{Candidate, Part, Position, gather, to_tone};
-use super::lines::{FamilyLines, Line, LineInput, Scratch, family_lines};
+use super::lines::{FamilyLines, Line, LineInput, Scratch, family_lines, short_lattice};
 use super::listing::{
     LineLevel, Scene, clock_candidates, family_candidates, output_candidate, raw_reference_candidates,
     reference_candidates,
@@ -270,6 +270,8 @@ impl Legal<'_> {
         let detector = &plan.detector;
         let drained = detector.offset_current_a + detector.leakage_a.unwrap_or(0.0);
         let length = period(&placement.modulator);
+        let highest = family.iter().map(|tone| tone.harmonic).max().unwrap_or(1);
+        let known_curve = self.setup.tabulated_curve(placement, short_lattice(&placement.modulator, highest));
         let input = LineInput {
             modulator: &placement.modulator,
             period: &length,
@@ -279,6 +281,7 @@ impl Legal<'_> {
             record: plan.analysis.record,
             pfd_hz,
             vco_hz: placement.vco.to_f64_hz(),
+            known_curve: known_curve.as_ref(),
         };
         let lines = family_lines(&input, self.setup.fft(), scratch)
             .map_err(|source| AssessError::Lines { channel: self.channel, source })?;
@@ -287,21 +290,7 @@ impl Legal<'_> {
 
     /// Returns the charge curve of the channel; `None` while the mismatch is unknown.
     pub fn charge_curve(&self) -> Option<ChargeCurve> {
-        let detector = &self.plan().detector;
-        let vco_hz = self.placement.vco.to_f64_hz();
-        if let Some(table) = &detector.table {
-            return Some(ChargeCurve::from_table(table, detector.current_a, vco_hz));
-        }
-        let mismatch = match detector.mismatch.as_ref()? {
-            MismatchPoints::Constant(value) => *value,
-            MismatchPoints::Table(points) => interpolate(points, self.placement.tuning_v?),
-        };
-        Some(ChargeCurve::from_terms(&ChargeTerms {
-            mismatch,
-            dead_zone_cycles: detector.dead_zone_s * vco_hz,
-            quadratic_per_cycle: detector.quadratic_per_cycle,
-            cubic_per_cycle2: detector.cubic_per_cycle2,
-        }))
+        charge_curve(self.plan(), self.placement.vco.to_f64_hz(), self.placement.tuning_v)
     }
 
     /// Returns every tone of the channel before it is judged.
@@ -499,6 +488,24 @@ impl Legal<'_> {
         result.warnings.sort();
         result.warnings.dedup();
     }
+}
+
+/// Returns the charge curve at a VCO frequency \[Hz\] and tuning voltage \[V\]; `None` while the mismatch is unknown.
+pub(super) fn charge_curve(plan: &Plan, vco_hz: f64, tuning_v: Option<f64>) -> Option<ChargeCurve> {
+    let detector = &plan.detector;
+    if let Some(table) = &detector.table {
+        return Some(ChargeCurve::from_table(table, detector.current_a, vco_hz));
+    }
+    let mismatch = match detector.mismatch.as_ref()? {
+        MismatchPoints::Constant(value) => *value,
+        MismatchPoints::Table(points) => interpolate(points, tuning_v?),
+    };
+    Some(ChargeCurve::from_terms(&ChargeTerms {
+        mismatch,
+        dead_zone_cycles: detector.dead_zone_s * vco_hz,
+        quadratic_per_cycle: detector.quadratic_per_cycle,
+        cubic_per_cycle2: detector.cubic_per_cycle2,
+    }))
 }
 
 /// Copies the noise figures into the result.

@@ -5,6 +5,7 @@ mod method_check;
 mod result;
 mod run;
 mod spectrum_view;
+mod table_check;
 
 pub use crate::assess::SpectrumView;
 pub use beats::{Beat, Node, beats};

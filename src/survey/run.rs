@@ -10,6 +10,10 @@ use crate::plan::Plan;
 use super::method_check::check_method;
 use super::result::{LoopSummary, Range3, Summary, SurveyResult};
 use super::spectrum_view::spectrum_of;
+use super::table_check::check_tables;
+
+/// Channels from which tables of loop, curve and noise pay.
+const TABULATED_CHANNELS: u64 = 64;
 
 /// Surveys every channel of a plan; `done` is called with the number of channels finished since the last call.
 ///
@@ -18,7 +22,9 @@ use super::spectrum_view::spectrum_of;
 /// # Errors
 /// `AssessError` when the plan as a whole is refused: no legal channel, an unstable loop, exact overflow.
 pub fn survey(plan: &Plan, done: &(dyn Fn(u64) + Sync)) -> Result<SurveyResult, AssessError> {
+    let count: u64 = plan.groups.iter().map(|group| group.channels.len()).sum();
     let setup = Setup::new(plan)?;
+    let setup = if count >= TABULATED_CHANNELS { setup.tabulated() } else { setup };
     let positions: Vec<(usize, u64)> = plan
         .groups
         .iter()
@@ -39,8 +45,11 @@ pub fn survey(plan: &Plan, done: &(dyn Fn(u64) + Sync)) -> Result<SurveyResult, 
     let mut warnings = plan.warnings.clone();
     warnings.extend(setup.warnings().iter().cloned());
     warnings.extend(shared_warnings(&channels));
-    let (method_check, doubts) = check_method(&setup, &channels)?;
+    let (mut method_check, doubts) = check_method(&setup, &channels)?;
     warnings.extend(doubts);
+    if count >= TABULATED_CHANNELS {
+        warnings.extend(check_tables(&setup, &channels, &mut method_check)?);
+    }
     Ok(SurveyResult {
         assumptions: setup.assumptions(),
         conventions: conventions(),
