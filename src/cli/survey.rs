@@ -2,12 +2,13 @@
 
 use std::path::{Path, PathBuf};
 
-use crate::assess::AssessError;
+use crate::assess::{AssessError, ChannelResult};
 use crate::plan::{Plan, demo_plan};
 use crate::report::{
-    Detail, RenderOptions, ReportError, add_files, beat_files, beats_text, check_target, render, survey_json, write_set,
+    ChannelRows, Detail, RenderOptions, ReportError, StreamedSet, add_files, beat_files, beats_text, check_target,
+    read_file, render, survey_json, write_set,
 };
-use crate::survey::{SurveyResult, beats, survey};
+use crate::survey::{Keep, Steps, SurveyResult, beats, survey, survey_in_blocks};
 
 use super::arguments::{DetailChoice, FailOn, SurveyArguments};
 use super::failure::Failure;
@@ -32,10 +33,6 @@ pub fn run(arguments: &SurveyArguments) -> Result<(), Failure> {
     let out = arguments.out.clone().unwrap_or_else(|| PathBuf::from("reports").join(&plan.stem));
     check_target(&out).map_err(report_failure)?;
     let channels: u64 = plan.groups.iter().map(|group| group.channels.len()).sum();
-    let bar = Bar::new(channels, "channels", voice);
-    let result = in_pool(arguments.common.jobs, || survey(&plan, &|items| bar.advance(items)))?
-        .map_err(|error| assess_failure(&plan, &error))?;
-    bar.finish();
     let detail = match arguments.detail {
         Some(DetailChoice::All) => Detail::All,
         Some(DetailChoice::Flagged) => Detail::Flagged,
@@ -43,8 +40,23 @@ pub fn run(arguments: &SurveyArguments) -> Result<(), Failure> {
         None => Detail::All,
     };
     let options = RenderOptions { detail };
-    let set = render(&result, &options).map_err(report_failure)?;
-    write_set(&out, &set).map_err(report_failure)?;
+    let bar = Bar::new(channels, "channels", voice);
+    // Beats look at every channel again, so all are kept then.
+    let is_streamed = channels > FULL_DETAIL_CHANNELS && neighbours.is_empty();
+    let result = if is_streamed {
+        in_pool(arguments.common.jobs, || streamed(&plan, &out, &options, &bar))?
+    } else {
+        in_pool(arguments.common.jobs, || survey(&plan, &|items| bar.advance(items)).map_err(Stopped::from))?
+    };
+    let result = result.map_err(|stopped| match stopped {
+        Stopped::Assess(error) => assess_failure(&plan, &error),
+        Stopped::Report(error) => report_failure(error),
+    })?;
+    bar.finish();
+    if !is_streamed {
+        let set = render(&result, &options).map_err(report_failure)?;
+        write_set(&out, &set).map_err(report_failure)?;
+    }
     if !neighbours.is_empty() {
         let found = in_pool(arguments.common.jobs, || beats(&result.channels, &plan, &neighbours))?
             .map_err(|error| assess_failure(&plan, &error))?;
@@ -62,9 +74,44 @@ pub fn run(arguments: &SurveyArguments) -> Result<(), Failure> {
     }
     voice.say(&verdict_line(&result, &out));
     if arguments.common.json {
-        output::print(&survey_json(&result, &options).map_err(report_failure)?)?;
+        let text = if is_streamed {
+            String::from_utf8_lossy(&read_file(&out.join("survey.json")).map_err(report_failure)?).into_owned()
+        } else {
+            survey_json(&result, &options).map_err(report_failure)?
+        };
+        output::print(&text)?;
     }
     flagged(arguments.common.fail_on, result.summary.bad, result.summary.marginal)
+}
+
+/// Why a survey that writes as it goes stops.
+enum Stopped {
+    Assess(AssessError),
+    Report(ReportError),
+}
+
+impl From<AssessError> for Stopped {
+    fn from(error: AssessError) -> Self {
+        Self::Assess(error)
+    }
+}
+
+impl From<ReportError> for Stopped {
+    fn from(error: ReportError) -> Self {
+        Self::Report(error)
+    }
+}
+
+/// Surveys a large plan: rows go to disk as they come, and the result holds the worst channels and a sample.
+fn streamed(plan: &Plan, out: &Path, options: &RenderOptions, bar: &Bar) -> Result<SurveyResult, Stopped> {
+    let mut set = StreamedSet::new(out)?;
+    let steps = Steps {
+        render: &|channels: &[ChannelResult]| Ok::<_, Stopped>(ChannelRows::new(channels, options)?),
+        done: &|items| bar.advance(items),
+    };
+    let result = survey_in_blocks(plan, Keep::WorstAndSample, &steps, &mut |rows| Ok(set.add(&rows)?))?;
+    set.finish(&result, options)?;
+    Ok(result)
 }
 
 /// Returns the run in one sentence.

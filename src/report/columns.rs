@@ -1,5 +1,7 @@
 //! `channels.csv`: one table of names and accessors is the whole definition of the file.
 
+use std::ops::Deref;
+
 use serde::Serialize;
 
 use super::ReportError;
@@ -28,7 +30,20 @@ pub struct Column {
     /// Name, with the base unit as suffix; the same as the key in survey.json where both have it.
     pub name: &'static str,
     /// What the cell of a channel holds.
-    pub cell: fn(&ChannelResult) -> Cell,
+    cell: fn(&Facts<'_>) -> Cell,
+}
+
+/// A channel with what several of its cells need.
+struct Facts<'a> {
+    result: &'a ChannelResult,
+    worst: Option<&'a Tone>,
+}
+
+impl Deref for Facts<'_> {
+    type Target = ChannelResult;
+    fn deref(&self) -> &ChannelResult {
+        self.result
+    }
 }
 
 fn figure(value: Option<f64>) -> Cell {
@@ -52,8 +67,8 @@ fn joined<T, I: IntoIterator<Item = T>>(parts: I, show: impl Fn(T) -> String, be
     text(&parts.into_iter().map(show).collect::<Vec<_>>().join(between))
 }
 
-fn worst(channel: &ChannelResult, cell: impl Fn(&Tone) -> Cell) -> Cell {
-    channel.worst_tone().map_or(Cell::Empty, cell)
+fn worst(facts: &Facts<'_>, cell: impl Fn(&Tone) -> Cell) -> Cell {
+    facts.worst.map_or(Cell::Empty, cell)
 }
 
 fn nearest(channel: &ChannelResult, cell: impl Fn(&crate::assess::BoundaryNear) -> Cell) -> Cell {
@@ -170,15 +185,33 @@ fn cell_text(name: &str, cell: Cell) -> Result<String, ReportError> {
 /// # Errors
 /// `NotFinite` with the column of a NaN or an infinity; `Csv` where the writer fails.
 pub fn channels_csv(channels: &[ChannelResult]) -> Result<Vec<u8>, ReportError> {
-    let mut writer = csv::WriterBuilder::new().terminator(csv::Terminator::CRLF).from_writer(Vec::new());
+    let mut bytes = csv_header()?;
+    bytes.extend(channel_rows_csv(channels)?);
+    Ok(bytes)
+}
+
+/// Returns the first row of `channels.csv`.
+pub(crate) fn csv_header() -> Result<Vec<u8>, ReportError> {
+    let mut writer = writer();
     writer.write_record(COLUMNS.iter().map(|column| column.name))?;
+    writer.into_inner().map_err(|error| ReportError::Csv(error.into_error().into()))
+}
+
+/// Returns the rows of channels, without a header.
+pub(crate) fn channel_rows_csv(channels: &[ChannelResult]) -> Result<Vec<u8>, ReportError> {
+    let mut writer = writer();
     for channel in channels {
+        let facts = Facts { result: channel, worst: channel.worst_tone() };
         for column in COLUMNS {
-            writer.write_field(cell_text(column.name, (column.cell)(channel))?)?;
+            writer.write_field(cell_text(column.name, (column.cell)(&facts))?)?;
         }
         writer.write_record(None::<&[u8]>)?;
     }
     writer.into_inner().map_err(|error| ReportError::Csv(error.into_error().into()))
+}
+
+fn writer() -> csv::Writer<Vec<u8>> {
+    csv::WriterBuilder::new().terminator(csv::Terminator::CRLF).from_writer(Vec::new())
 }
 
 #[cfg(test)]

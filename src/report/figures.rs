@@ -34,15 +34,67 @@ pub(crate) fn figure_text(key: &str, value: f64) -> Result<String, ReportError> 
     if !value.is_finite() {
         return Err(ReportError::NotFinite { key: key.to_owned(), found: value });
     }
-    let rounded = if key.ends_with("_db") || key.ends_with("_dbc") || key.ends_with("_dbc_per_hz") {
-        format!("{value:.DECIBEL_DECIMALS$}").parse()
-    } else if EXACT_KEYS.contains(&key.strip_prefix("boundary_").unwrap_or(key)) {
-        Ok(value)
+    if key.ends_with("_db") || key.ends_with("_dbc") || key.ends_with("_dbc_per_hz") {
+        return Ok(with_decimals(value));
+    }
+    if EXACT_KEYS.contains(&key.strip_prefix("boundary_").unwrap_or(key)) {
+        return Ok(shortest(value));
+    }
+    Ok(with_digits(value))
+}
+
+/// Returns the text of a whole number of at most nine digits: printing to so many digits is slow where nothing is to be
+/// rounded.
+fn whole(value: f64) -> Option<String> {
+    #[allow(clippy::cast_possible_truncation, reason = "tested to be a whole number below 1e9")]
+    (value.fract() == 0.0 && value.abs() < 1e9).then(|| (value as i64).to_string())
+}
+
+/// Returns a figure rounded to [`DECIBEL_DECIMALS`], without trailing zeros.
+fn with_decimals(value: f64) -> String {
+    if let Some(text) = whole(value) {
+        return text;
+    }
+    let mut text = format!("{value:.DECIBEL_DECIMALS$}");
+    if value.abs() >= 1e11 {
+        // Beyond 15 digits the decimals may not be the shortest that read back.
+        return shortest(text.parse().unwrap_or(value));
+    }
+    text.truncate(text.trim_end_matches('0').trim_end_matches('.').len());
+    if text == "-0" { "0".to_owned() } else { text }
+}
+
+/// Returns a figure rounded to [`SIGNIFICANT_DIGITS`], without trailing zeros: fewer than 16 digits are the shortest
+/// decimal that reads back, so they need not be read and printed again.
+fn with_digits(value: f64) -> String {
+    if let Some(text) = whole(value) {
+        return text;
+    }
+    let text = format!("{value:.*e}", SIGNIFICANT_DIGITS - 1);
+    let Some((mantissa, exponent)) = text.split_once('e') else { return text };
+    let exponent: i32 = exponent.parse().unwrap_or(0);
+    if value == 0.0 || !(-5..16).contains(&exponent) {
+        return shortest(text.parse().unwrap_or(value));
+    }
+    let (sign, mantissa) = mantissa.strip_prefix('-').map_or(("", mantissa), |rest| ("-", rest));
+    let digits: String = mantissa.chars().filter(|c| *c != '.').collect();
+    let digits = digits.trim_end_matches('0');
+    let mut out = String::with_capacity(24);
+    out.push_str(sign);
+    let whole = usize::try_from(exponent + 1).unwrap_or(0);
+    if whole == 0 {
+        out.push_str("0.");
+        (exponent + 1..0).for_each(|_| out.push('0'));
+        out.push_str(digits);
+    } else if digits.len() <= whole {
+        out.push_str(digits);
+        (digits.len()..whole).for_each(|_| out.push('0'));
     } else {
-        format!("{value:.*e}", SIGNIFICANT_DIGITS - 1).parse()
-    };
-    // A finite number printed by Rust is read back by Rust.
-    Ok(shortest(rounded.unwrap_or(value)))
+        out.push_str(&digits[..whole]);
+        out.push('.');
+        out.push_str(&digits[whole..]);
+    }
+    out
 }
 
 /// Returns the shortest decimal that reads back as the same double; zero has no sign.
@@ -118,6 +170,29 @@ mod tests {
         for (key, value, text) in cases {
             assert_eq!(figure_text(key, value).unwrap(), text, "{key}");
         }
+    }
+
+    #[test]
+    fn digits_are_those_of_the_shortest_decimal() {
+        let mut state = 1u64;
+        let mut checked = 0;
+        for exponent in -40..40 {
+            for _ in 0..200 {
+                state = state.wrapping_mul(6_364_136_223_846_793_005).wrapping_add(1_442_695_040_888_963_407);
+                let share = (state >> 11) as f64 / (1u64 << 53) as f64;
+                let value = (share - 0.5) * 10f64.powi(exponent);
+                let rounded: f64 = format!("{value:.*e}", SIGNIFICANT_DIGITS - 1).parse().unwrap();
+                assert_eq!(with_digits(value), shortest(rounded));
+                let rounded: f64 = format!("{value:.DECIBEL_DECIMALS$}").parse().unwrap();
+                assert_eq!(with_decimals(value), shortest(rounded));
+                checked += 1;
+            }
+        }
+        for value in [0.0, -0.0, 1.0, -10.0, 1e15, 1e16, 9.999_999_999_9e15, 1e-5, 9.999_999_999_9e-6, 123.0] {
+            let rounded: f64 = format!("{value:.*e}", SIGNIFICANT_DIGITS - 1).parse().unwrap();
+            assert_eq!(with_digits(value), shortest(rounded));
+        }
+        assert_eq!(checked, 16_000);
     }
 
     #[test]

@@ -42,17 +42,21 @@ struct Writer {
 impl Writer {
     fn string(&mut self, text: &str) {
         self.out.push('"');
-        for c in text.chars() {
-            match c {
-                '"' => self.out.push_str("\\\""),
-                '\\' => self.out.push_str("\\\\"),
-                '\n' => self.out.push_str("\\n"),
-                '\r' => self.out.push_str("\\r"),
-                '\t' => self.out.push_str("\\t"),
-                c if c < ' ' => self.out.push_str(&format!("\\u{:04x}", u32::from(c))),
-                c => self.out.push(c),
+        let mut rest = text;
+        // Stretches without anything to escape are copied whole; what is escaped is one byte each.
+        while let Some(at) = rest.bytes().position(|byte| byte < b' ' || byte == b'"' || byte == b'\\') {
+            self.out.push_str(&rest[..at]);
+            match rest.as_bytes()[at] {
+                b'"' => self.out.push_str("\\\""),
+                b'\\' => self.out.push_str("\\\\"),
+                b'\n' => self.out.push_str("\\n"),
+                b'\r' => self.out.push_str("\\r"),
+                b'\t' => self.out.push_str("\\t"),
+                byte => self.out.push_str(&format!("\\u{byte:04x}")),
             }
+            rest = &rest[at + 1..];
         }
+        self.out.push_str(rest);
         self.out.push('"');
     }
 

@@ -24,6 +24,7 @@ mod sequence;
 mod sequence_files;
 mod simulation;
 mod single_file;
+mod stream;
 mod survey_json;
 mod svg_backend;
 mod write;
@@ -47,8 +48,9 @@ pub use simulation::{
     settling_files, settling_json, settling_text, simulation_files, simulation_json, simulation_text,
 };
 pub use single_file::{read_file, write_file};
+pub use stream::{ChannelRows, StreamedSet};
 pub use survey_json::survey_json;
-pub use write::{add_files, check_target, write_set};
+pub use write::{StagedFile, StagedSet, add_files, check_target, write_set};
 
 use serde::Serialize;
 
@@ -115,12 +117,15 @@ pub fn render(result: &SurveyResult, options: &RenderOptions) -> Result<ReportSe
         ReportFile { path: "channels.csv".into(), bytes: channels_csv(&result.channels)? },
     ];
     files.extend(document::document(result, options)?);
+    Ok(ReportSet { files: with_marker(files, &[]) })
+}
+
+/// Returns the files in order, with the marker that names them and the files written elsewhere.
+fn with_marker(mut files: Vec<ReportFile>, elsewhere: &[&str]) -> Vec<ReportFile> {
     files.sort_by(|a, b| a.path.cmp(&b.path));
-    let mut marker = format!("{MARKER_HEAD}\n");
-    for file in &files {
-        marker.push_str(&file.path);
-        marker.push('\n');
-    }
+    let mut names: Vec<&str> = files.iter().map(|file| file.path.as_str()).chain(elsewhere.iter().copied()).collect();
+    names.sort_unstable();
+    let marker = format!("{MARKER_HEAD}\n{}\n", names.join("\n"));
     files.push(ReportFile { path: MARKER.into(), bytes: marker.into_bytes() });
-    Ok(ReportSet { files })
+    files
 }
