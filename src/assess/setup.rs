@@ -491,10 +491,12 @@ fn unused(plan: &Plan) -> Vec<String> {
 
 /// Returns what a loop does to a tone.
 pub(super) fn transfer_of(response: &LoopResponse, offset_hz: f64, output_divider: u64) -> Transfer {
+    let closed_loop = response.closed_loop(offset_hz);
     Transfer {
         offset_hz,
-        closed_loop: response.closed_loop(offset_hz).norm(),
-        error: response.error(offset_hz).norm(),
+        closed_loop: closed_loop.norm(),
+        // E = 1 − H, without a second evaluation.
+        error: (1.0 - closed_loop).norm(),
         output_divider: output_divider as f64,
     }
 }

@@ -120,7 +120,10 @@ impl Exact {
     /// Returns the largest integer not above the number.
     #[must_use]
     pub fn floor(&self) -> i128 {
-        self.numerator().div_euclid(self.denominator())
+        match (i64::try_from(self.numerator()), i64::try_from(self.denominator())) {
+            (Ok(numerator), Ok(denominator)) => i128::from(numerator.div_euclid(denominator)),
+            _ => self.numerator().div_euclid(self.denominator()),
+        }
     }
 
     /// Returns the nearest integer; a tie goes to the even one.
@@ -175,9 +178,11 @@ impl Exact {
     #[must_use]
     pub fn to_f64(&self) -> f64 {
         // Of integers that doubles hold exactly the quotient is correctly rounded.
-        const EXACT: std::ops::RangeInclusive<i128> = -(1 << 53)..=1 << 53;
-        let (numerator, denominator) = (self.numerator(), self.denominator());
-        if EXACT.contains(&numerator) && EXACT.contains(&denominator) {
+        const EXACT: std::ops::RangeInclusive<i64> = -(1 << 53)..=1 << 53;
+        if let (Ok(numerator), Ok(denominator)) = (i64::try_from(self.numerator()), i64::try_from(self.denominator()))
+            && EXACT.contains(&numerator)
+            && EXACT.contains(&denominator)
+        {
             return numerator as f64 / denominator as f64;
         }
         // Both parts pass f64 only above 2^1023: `to_f64` of a Ratio<i128> is always finite.

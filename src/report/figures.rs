@@ -73,8 +73,8 @@ fn with_digits(value: f64) -> String {
     let text = format!("{value:.*e}", SIGNIFICANT_DIGITS - 1);
     let Some((mantissa, exponent)) = text.split_once('e') else { return text };
     let exponent: i32 = exponent.parse().unwrap_or(0);
-    if value == 0.0 || !(-5..16).contains(&exponent) {
-        return shortest(text.parse().unwrap_or(value));
+    if !(-5..16).contains(&exponent) {
+        return format!("{}e{exponent}", mantissa.trim_end_matches('0').trim_end_matches('.'));
     }
     let (sign, mantissa) = mantissa.strip_prefix('-').map_or(("", mantissa), |rest| ("-", rest));
     let digits: String = mantissa.chars().filter(|c| *c != '.').collect();
