@@ -97,16 +97,18 @@ impl Terms {
     /// before it, half a step lower (that gives the limit of Gardner 1980).
     fn sampled(&self, s: Complex64, pfd_hz: f64) -> Complex64 {
         let half = 0.5 / pfd_hz;
-        let origin = coth(s * half);
+        // e^(−sT) once: a pole only makes it smaller by e^(−pT).
+        let turned = (-2.0 * half * s).exp();
+        let origin = coth(turned);
         let square = origin * origin - 1.0;
-        let poles: Complex64 = self.poles.iter().map(|(rate, residue)| coth((s + rate) * half) * *residue).sum();
+        let poles: Complex64 =
+            self.poles.iter().map(|(rate, residue)| coth(turned * (-2.0 * half * rate).exp()) * *residue).sum();
         (square * (self.double * half) + origin * self.single + poles - self.step) * half
     }
 }
 
-/// Returns coth z for Re z ≥ 0; large arguments give 1 without overflow.
-fn coth(z: Complex64) -> Complex64 {
-    let decayed = (-2.0 * z).exp();
+/// Returns coth z from e^(−2z), Re z ≥ 0; for large z it is 1 without overflow.
+fn coth(decayed: Complex64) -> Complex64 {
     (1.0 + decayed) / (1.0 - decayed)
 }
 

@@ -5,7 +5,7 @@ use std::ops::Deref;
 use serde::Serialize;
 
 use super::ReportError;
-use super::figures::figure_text;
+use super::figures::push_figure;
 use super::json::json_text;
 use crate::assess::{ChannelResult, Rule, Tone};
 
@@ -169,49 +169,61 @@ pub(crate) fn inert(text: String) -> String {
     }
 }
 
-/// Returns the text of a cell.
-fn cell_text(name: &str, cell: Cell) -> Result<String, ReportError> {
-    Ok(match cell {
-        Cell::Empty => String::new(),
-        Cell::Text(text) => inert(text),
-        Cell::Integer(digits) => digits,
-        Cell::Figure(value) => figure_text(name, value)?,
-        Cell::Flag(flag) => flag.to_string(),
-    })
+/// Appends a cell, quoted where RFC 4180 asks for it.
+fn push_cell(out: &mut String, name: &str, cell: &Cell) -> Result<(), ReportError> {
+    match cell {
+        Cell::Empty => {}
+        Cell::Text(text) => push_field(out, &inert(text.clone())),
+        Cell::Integer(digits) => out.push_str(digits),
+        Cell::Figure(value) => push_figure(out, name, *value)?,
+        Cell::Flag(flag) => out.push_str(if *flag { "true" } else { "false" }),
+    }
+    Ok(())
+}
+
+fn push_field(out: &mut String, text: &str) {
+    if !text.bytes().any(|byte| matches!(byte, b'"' | b',' | b'\r' | b'\n')) {
+        return out.push_str(text);
+    }
+    out.push('"');
+    for (place, part) in text.split('"').enumerate() {
+        if place > 0 {
+            out.push_str("\"\"");
+        }
+        out.push_str(part);
+    }
+    out.push('"');
 }
 
 /// Returns the bytes of `channels.csv`: a header and one row for every channel, in plan order (RFC 4180, UTF-8).
 ///
 /// # Errors
-/// `NotFinite` with the column of a NaN or an infinity; `Csv` where the writer fails.
+/// `NotFinite` with the column of a NaN or an infinity.
 pub fn channels_csv(channels: &[ChannelResult]) -> Result<Vec<u8>, ReportError> {
-    let mut bytes = csv_header()?;
-    bytes.extend(channel_rows_csv(channels)?);
-    Ok(bytes)
+    let mut text = csv_header();
+    push_rows(&mut text, channels)?;
+    Ok(text.into_bytes())
 }
 
 /// Returns the first row of `channels.csv`.
-pub(crate) fn csv_header() -> Result<Vec<u8>, ReportError> {
-    let mut writer = writer();
-    writer.write_record(COLUMNS.iter().map(|column| column.name))?;
-    writer.into_inner().map_err(|error| ReportError::Csv(error.into_error().into()))
+pub(crate) fn csv_header() -> String {
+    let names: Vec<&str> = COLUMNS.iter().map(|column| column.name).collect();
+    format!("{}\r\n", names.join(","))
 }
 
-/// Returns the rows of channels, without a header.
-pub(crate) fn channel_rows_csv(channels: &[ChannelResult]) -> Result<Vec<u8>, ReportError> {
-    let mut writer = writer();
+/// Appends the rows of channels.
+pub(crate) fn push_rows(out: &mut String, channels: &[ChannelResult]) -> Result<(), ReportError> {
     for channel in channels {
         let facts = Facts { result: channel, worst: channel.worst_tone() };
-        for column in COLUMNS {
-            writer.write_field(cell_text(column.name, (column.cell)(&facts))?)?;
+        for (place, column) in COLUMNS.iter().enumerate() {
+            if place > 0 {
+                out.push(',');
+            }
+            push_cell(out, column.name, &(column.cell)(&facts))?;
         }
-        writer.write_record(None::<&[u8]>)?;
+        out.push_str("\r\n");
     }
-    writer.into_inner().map_err(|error| ReportError::Csv(error.into_error().into()))
-}
-
-fn writer() -> csv::Writer<Vec<u8>> {
-    csv::WriterBuilder::new().terminator(csv::Terminator::CRLF).from_writer(Vec::new())
+    Ok(())
 }
 
 #[cfg(test)]
@@ -220,12 +232,29 @@ mod tests {
 
     #[test]
     fn makes_text_inert_and_leaves_numbers_alone() {
+        let text = |name: &str, cell: Cell| {
+            let mut out = String::new();
+            push_cell(&mut out, name, &cell).unwrap();
+            out
+        };
         for typed in ["=1+1", "+1", "-1", "@SUM(A1)", "\t=1", "＝1"] {
-            assert_eq!(cell_text("group", Cell::Text(typed.to_owned())).unwrap(), format!("'{typed}"));
+            assert_eq!(text("group", Cell::Text(typed.to_owned())), format!("'{typed}"));
         }
-        assert_eq!(cell_text("group", Cell::Text("uplink".into())).unwrap(), "uplink");
-        assert_eq!(cell_text("worst_level_dbc", Cell::Figure(-56.5)).unwrap(), "-56.5");
-        assert_eq!(cell_text("boundary_p", Cell::Integer("-3".into())).unwrap(), "-3");
+        assert_eq!(text("group", Cell::Text("uplink".into())), "uplink");
+        assert_eq!(text("worst_level_dbc", Cell::Figure(-56.5)), "-56.5");
+        assert_eq!(text("boundary_p", Cell::Integer("-3".into())), "-3");
+    }
+
+    #[test]
+    fn fields_are_quoted_as_the_usual_writer_does() {
+        for text in ["", "plain", "a,b", "say \"no\"", "\"", "two\r\nlines", "ü;x", "a\nb,\"c\""] {
+            let mut usual = csv::WriterBuilder::new().terminator(csv::Terminator::CRLF).from_writer(Vec::new());
+            usual.write_record(["x", text]).unwrap();
+            let mut ours = "x,".to_owned();
+            push_field(&mut ours, text);
+            ours.push_str("\r\n");
+            assert_eq!(ours.into_bytes(), usual.into_inner().unwrap());
+        }
     }
 
     #[test]

@@ -6,7 +6,7 @@
 use serde::ser::{self, Serialize, Serializer};
 
 use super::ReportError;
-use super::figures::figure_text;
+use super::figures::push_figure;
 
 /// The struct name under which `serde_json` hands over a number of any length.
 const BIG_NUMBER: &str = "$serde_json::private::Number";
@@ -139,9 +139,7 @@ impl<'a> Serializer for &'a mut Writer {
     }
 
     fn serialize_f64(self, value: f64) -> Result<(), ReportError> {
-        let text = figure_text(&self.key, value)?;
-        self.out.push_str(&text);
-        Ok(())
+        push_figure(&mut self.out, &self.key, value)
     }
 
     fn serialize_char(self, value: char) -> Result<(), ReportError> {

@@ -5,7 +5,7 @@ use std::path::Path;
 use crate::assess::ChannelResult;
 use crate::survey::SurveyResult;
 
-use super::columns::{channel_rows_csv, csv_header};
+use super::columns::{csv_header, push_rows};
 use super::survey_json::{ROW_END, channel_rows_json, survey_json_around};
 use super::write::{StagedFile, StagedSet};
 use super::{RenderOptions, ReportError, ReportSet, document, with_marker};
@@ -16,7 +16,7 @@ const WAITING: &str = "survey.json.rows";
 /// The rows of some channels, in both forms.
 #[derive(Debug, Clone, PartialEq, Eq)]
 pub struct ChannelRows {
-    csv: Vec<u8>,
+    csv: String,
     json: String,
     listed: u64,
 }
@@ -29,7 +29,9 @@ impl ChannelRows {
     pub fn new(channels: &[ChannelResult], options: &RenderOptions) -> Result<Self, ReportError> {
         let json = channel_rows_json(channels, options.detail)?;
         let listed = channels.iter().filter(|channel| super::survey_json::listed(channel, options.detail)).count();
-        Ok(Self { csv: channel_rows_csv(channels)?, json, listed: listed as u64 })
+        let mut csv = String::with_capacity(channels.len() * 1024);
+        push_rows(&mut csv, channels)?;
+        Ok(Self { csv, json, listed: listed as u64 })
     }
 }
 
@@ -50,7 +52,7 @@ impl StreamedSet {
     pub fn new(out_dir: &Path) -> Result<Self, ReportError> {
         let set = StagedSet::new(out_dir)?;
         let mut csv = set.create("channels.csv")?;
-        csv.write(&csv_header()?)?;
+        csv.write(csv_header().as_bytes())?;
         let json = set.create(WAITING)?;
         Ok(Self { set, csv, json, listed: 0 })
     }
@@ -61,7 +63,7 @@ impl StreamedSet {
     /// `Io` where the system refuses.
     pub fn add(&mut self, rows: &ChannelRows) -> Result<(), ReportError> {
         self.listed += rows.listed;
-        self.csv.write(&rows.csv)?;
+        self.csv.write(rows.csv.as_bytes())?;
         self.json.write(rows.json.as_bytes())
     }
 
