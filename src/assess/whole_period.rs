@@ -16,8 +16,8 @@ use super::setup::{AssessError, Setup};
 /// Outputs generated at a time.
 const BLOCK: usize = 1 << 14;
 
-/// Products by which a phasor is turned before it is computed anew: rounding stays below 1e-14.
-const TURNS: u32 = 64;
+/// Cycles that share a table of turns.
+const STRETCH: usize = 256;
 
 /// One line found by both routes.
 #[derive(Debug, Clone, Copy, PartialEq)]
@@ -71,25 +71,23 @@ fn correlate_period(
     let modulus = config.modulus().get();
     let scale = 1.0 / modulus as f64;
     let mean = mean_phase(config, period)?;
-    let step = Complex64::cis(-TAU * (residue as f64 * scale));
+    // Turns of one stretch; the stretch itself is turned by its own exact integer.
+    let residue_of = |n: usize| u128::from(residue) * n as u128 % u128::from(modulus);
+    let turns: Vec<Complex64> = (0..STRETCH).map(|n| Complex64::cis(-TAU * (residue_of(n) as f64 * scale))).collect();
     let mut sum = Complex64::ZERO;
-    let mut turn: u64 = 0;
-    let mut phasor = Complex64::ONE;
-    let mut left = 0;
+    let mut stretch = Complex64::ZERO;
+    let (mut place, mut start) = (0, 0u128);
+    let turned = |start: u128, stretch: Complex64| Complex64::cis(-TAU * (start as f64 * scale)) * stretch;
     for_each_phase(config, period, |numerator| {
-        // The phasor is turned by products for a while, then taken from the exact integer again.
-        if left == 0 {
-            phasor = Complex64::cis(-TAU * (turn as f64 * scale));
-            left = TURNS;
-        }
-        sum += phasor * charge(numerator as f64 * scale - mean);
-        phasor *= step;
-        left -= 1;
-        turn += residue;
-        if turn >= modulus {
-            turn -= modulus;
+        stretch += turns[place] * charge(numerator as f64 * scale - mean);
+        place += 1;
+        if place == STRETCH {
+            sum += turned(start, stretch);
+            start = (start + residue_of(STRETCH)) % u128::from(modulus);
+            (place, stretch) = (0, Complex64::ZERO);
         }
     })?;
+    sum += turned(start, stretch);
     Ok(sum / period as f64)
 }
 

@@ -26,20 +26,17 @@ pub(crate) const SIGNIFICANT_DIGITS: usize = 10;
 /// Decimals of a figure in decibels.
 pub(crate) const DECIBEL_DECIMALS: usize = 4;
 
-/// Returns a figure as JSON and CSV write it, rounded by the unit that its key names.
-///
-/// Decibels: 4 decimals. Exact frequencies: the nearest double in full. Everything else: 10 significant digits.
-///
-/// # Errors
-/// `NotFinite` for NaN and infinities.
+/// Returns what [`push_figure`] appends.
 #[cfg(test)]
-pub(crate) fn figure_text(key: &str, value: f64) -> Result<String, ReportError> {
+fn figure_text(key: &str, value: f64) -> Result<String, ReportError> {
     let mut text = String::with_capacity(24);
     push_figure(&mut text, key, value)?;
     Ok(text)
 }
 
-/// Appends a figure as [`figure_text`] returns it.
+/// Appends a figure as JSON and CSV write it, rounded by the unit that its key names.
+///
+/// Decibels: 4 decimals. Exact frequencies: the nearest double in full. Everything else: 10 significant digits.
 ///
 /// # Errors
 /// `NotFinite` for NaN and infinities.

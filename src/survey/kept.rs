@@ -74,14 +74,17 @@ impl Kept {
         Self { stride, sample: Vec::new(), worst: Vec::new() }
     }
 
-    /// Returns a channel at this place of the plan if it may be kept.
-    pub(super) fn wanted(&self, place: u64, channel: ChannelResult) -> Option<Candidate> {
+    /// Returns whether a channel at this place of the plan may be kept.
+    pub(super) fn wants(&self, place: u64, channel: &ChannelResult) -> bool {
+        place.is_multiple_of(self.stride) || channel.verdict != Verdict::Clear
+    }
+
+    /// Returns a wanted channel with its rank.
+    pub(super) fn candidate(&self, place: u64, channel: ChannelResult) -> Candidate {
         if place.is_multiple_of(self.stride) {
-            Some(Candidate::Sample(channel))
-        } else if channel.verdict == Verdict::Clear {
-            None
+            Candidate::Sample(channel)
         } else {
-            Some(Candidate::Flagged(Key::of(&channel), channel))
+            Candidate::Flagged(Key::of(&channel), channel)
         }
     }
 

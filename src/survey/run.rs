@@ -17,9 +17,9 @@ use super::tally::Tally;
 /// Channels from which tables of loop, curve and noise pay.
 const TABULATED_CHANNELS: u64 = 64;
 /// Channels that one worker takes at a time.
-const BLOCK_CHANNELS: u64 = 256;
+const BLOCK_CHANNELS: u64 = 64;
 /// Blocks between two calls of the taker: enough to keep every worker busy, few enough to stay small.
-const WAVE_BLOCKS: usize = 64;
+const WAVE_BLOCKS: usize = 256;
 
 /// Surveys every channel of a plan; `done` is called with the number of channels finished since the last call.
 ///
@@ -136,7 +136,7 @@ fn one_block<R, E: From<AssessError>>(
     steps: &Steps<'_, R, E>,
     scratch: &mut Scratch,
 ) -> Result<Finished<R>, E> {
-    let channels = block
+    let mut channels = block
         .indices
         .clone()
         .map(|index| setup.assess_index(block.group, index, scratch))
@@ -145,7 +145,17 @@ fn one_block<R, E: From<AssessError>>(
     let mut tally = Tally::default();
     channels.iter().for_each(|channel| tally.count(channel));
     (steps.done)(channels.len() as u64);
-    let kept = (block.first..).zip(channels).filter_map(|(place, channel)| kept.wanted(place, channel)).collect();
+    let mut places = Vec::new();
+    let mut place = block.first;
+    channels.retain(|channel| {
+        let wanted = kept.wants(place, channel);
+        if wanted {
+            places.push(place);
+        }
+        place += 1;
+        wanted
+    });
+    let kept = places.into_iter().zip(channels).map(|(place, channel)| kept.candidate(place, channel)).collect();
     Ok(Finished { rendered, tally, kept })
 }
 
