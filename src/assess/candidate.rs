@@ -1,5 +1,7 @@
 //! Tones before they are judged: parts that fall on one exact offset are gathered, then summed.
 
+use std::fmt;
+
 use crate::base::{Basis, Frequency};
 use crate::tones::worst_case_sum_dbc;
 
@@ -40,13 +42,46 @@ impl Part {
     }
 }
 
+/// Short name of a tone for a reader; most tones lie below the floor and are never named, so it is written when asked.
+#[derive(Debug, Clone, PartialEq)]
+pub enum Label {
+    /// Boundary p/q of the PFD frequency.
+    Boundary(i128, u64),
+    /// Multiple of K/M.
+    Multiple(u64),
+    /// Boundary p/q of the reference.
+    ReferenceBoundary(i128, u64),
+    /// Harmonic of the PFD frequency.
+    Pfd(u64),
+    /// Any other text.
+    Text(String),
+}
+
+impl From<String> for Label {
+    fn from(text: String) -> Self {
+        Self::Text(text)
+    }
+}
+
+impl fmt::Display for Label {
+    fn fmt(&self, f: &mut fmt::Formatter<'_>) -> fmt::Result {
+        match self {
+            Self::Boundary(p, q) => write!(f, "boundary {p}/{q}"),
+            Self::Multiple(harmonic) => write!(f, "{harmonic} × K/M"),
+            Self::ReferenceBoundary(p, q) => write!(f, "reference boundary {p}/{q}"),
+            Self::Pfd(harmonic) => write!(f, "PFD frequency × {harmonic}"),
+            Self::Text(text) => f.write_str(text),
+        }
+    }
+}
+
 /// A tone at one exact offset, with its parts side by side.
 #[derive(Debug, Clone, PartialEq)]
 pub struct Candidate {
     /// What makes it.
     pub origin: Origin,
     /// Short name for a reader.
-    pub label: String,
+    pub label: Label,
     /// Smallest harmonic of its family.
     pub harmonic: Option<u64>,
     /// Exact offset, positive.
@@ -76,10 +111,10 @@ pub struct Candidate {
 impl Candidate {
     /// Returns a candidate without any part.
     #[must_use]
-    pub fn new(origin: Origin, label: String, offset: Frequency) -> Self {
+    pub fn new(origin: Origin, label: impl Into<Label>, offset: Frequency) -> Self {
         Self {
             origin,
-            label,
+            label: label.into(),
             harmonic: None,
             offset,
             boundary: None,
@@ -111,13 +146,25 @@ impl Candidate {
         self.parts().iter().any(|(_, part)| matches!(part, Part::Known(..) | Part::Unknown(_)))
     }
 
+    /// Returns the worst-case sum of the known parts \[dBc\].
+    fn known_level_dbc(&self) -> Option<f64> {
+        worst_case_sum_dbc(self.parts().iter().filter_map(|(_, part)| part.level()))
+    }
+
+    /// Returns whether the tone has no cause, or is known to lie below a floor \[dBc\].
+    #[must_use]
+    pub fn is_below(&self, floor_dbc: f64) -> bool {
+        let is_known = !self.parts().iter().any(|(_, part)| matches!(part, Part::Unknown(_)));
+        !self.is_present() || (is_known && self.known_level_dbc().is_some_and(|level| level < floor_dbc))
+    }
+
     /// Takes in another candidate on the same offset; the identity stays that of `self`.
     fn absorb(&mut self, other: Self) {
         fn join(into: &mut Part, from: Part) {
             *into = std::mem::replace(into, Part::Absent).joined(from);
         }
         if self.label != other.label {
-            self.label = format!("{} + {}", self.label, other.label);
+            self.label = Label::Text(format!("{} + {}", self.label, other.label));
         }
         // One board, one coupling at one offset: an anchor that covers the place in one family covers it in all.
         match (&self.coupling, &other.coupling) {
@@ -172,7 +219,7 @@ pub struct Position {
 /// Returns the tone: worst-case sum of its parts, known part, margin.
 #[must_use]
 pub fn to_tone(candidate: Candidate, position: Position) -> Tone {
-    let known_level_dbc = worst_case_sum_dbc(candidate.parts().iter().filter_map(|(_, part)| part.level()));
+    let known_level_dbc = candidate.known_level_dbc();
     let mut unknown = Vec::new();
     let mut complete = true;
     let mut basis: Option<Basis> = None;
@@ -213,7 +260,7 @@ pub fn to_tone(candidate: Candidate, position: Position) -> Tone {
         residue: candidate.residue,
         victims: Vec::new(),
         unknown,
-        label: candidate.label,
+        label: candidate.label.to_string(),
     }
 }
 

@@ -8,7 +8,7 @@ use crate::spectrum::{divided_dbc, sideband_dbc};
 use crate::tones::{Charge, FamilyTone, modulator_family, nearest_fraction};
 
 use super::candidate::{Candidate, Part, Position, gather, to_tone};
-use super::lines::{FamilyLines, Line, LineInput, Scratch, family_lines};
+use super::lines::{FamilyLines, Line, LineInput, Scratch, family_lines, short_lattice};
 use super::listing::{
     LineLevel, Scene, clock_candidates, family_candidates, output_candidate, raw_reference_candidates,
     reference_candidates,
@@ -270,6 +270,8 @@ impl Legal<'_> {
         let detector = &plan.detector;
         let drained = detector.offset_current_a + detector.leakage_a.unwrap_or(0.0);
         let length = period(&placement.modulator);
+        let highest = family.iter().map(|tone| tone.harmonic).max().unwrap_or(1);
+        let known_curve = self.setup.tabulated_curve(placement, short_lattice(&placement.modulator, highest));
         let input = LineInput {
             modulator: &placement.modulator,
             period: &length,
@@ -279,6 +281,7 @@ impl Legal<'_> {
             record: plan.analysis.record,
             pfd_hz,
             vco_hz: placement.vco.to_f64_hz(),
+            known_curve: known_curve.as_ref(),
         };
         let lines = family_lines(&input, self.setup.fft(), scratch)
             .map_err(|source| AssessError::Lines { channel: self.channel, source })?;
@@ -287,21 +290,7 @@ impl Legal<'_> {
 
     /// Returns the charge curve of the channel; `None` while the mismatch is unknown.
     pub fn charge_curve(&self) -> Option<ChargeCurve> {
-        let detector = &self.plan().detector;
-        let vco_hz = self.placement.vco.to_f64_hz();
-        if let Some(table) = &detector.table {
-            return Some(ChargeCurve::from_table(table, detector.current_a, vco_hz));
-        }
-        let mismatch = match detector.mismatch.as_ref()? {
-            MismatchPoints::Constant(value) => *value,
-            MismatchPoints::Table(points) => interpolate(points, self.placement.tuning_v?),
-        };
-        Some(ChargeCurve::from_terms(&ChargeTerms {
-            mismatch,
-            dead_zone_cycles: detector.dead_zone_s * vco_hz,
-            quadratic_per_cycle: detector.quadratic_per_cycle,
-            cubic_per_cycle2: detector.cubic_per_cycle2,
-        }))
+        charge_curve(self.plan(), self.placement.vco.to_f64_hz(), self.placement.tuning_v)
     }
 
     /// Returns every tone of the channel before it is judged.
@@ -335,10 +324,9 @@ impl Legal<'_> {
         Ok(gather(candidates))
     }
 
-    /// Returns the level of one line coefficient at the output.
-    fn line_part(&self, response: &LoopResponse, offset_hz: f64, amplitude_cycles: f64, basis: Basis) -> Part {
-        let level = sideband_dbc(amplitude_cycles * response.closed_loop(offset_hz).norm())
-            .map(|level| divided_dbc(level, self.placement.output_divider));
+    /// Returns the level of one line behind the loop at the output.
+    fn line_part(&self, amplitude_cycles: f64, basis: Basis) -> Part {
+        let level = sideband_dbc(amplitude_cycles).map(|level| divided_dbc(level, self.placement.output_divider));
         match level {
             Some(level) if level > NO_LEVEL_DBC => Part::Known(level, basis),
             _ => Part::Absent,
@@ -359,12 +347,14 @@ impl Legal<'_> {
         let loop_basis = self.loop_basis();
         let detector_basis = loop_basis.max(plan.basis_of("detector.mismatch"));
         let reach_hz = response.unity_gain_hz().or(response.closed_loop_3db_hz()).map(|f| STRONG_LINE_REACH * f);
-        let is_strong = |offset: f64, line: &Line| {
-            let size = line.modulator.norm() * response.closed_loop(offset).norm();
-            reach_hz.is_some_and(|reach| offset <= reach)
-                && sideband_dbc(size).is_some_and(|level| level > STRONG_LINE_DBC)
+        // Size of the loop's gain at each tone, once.
+        let places: Vec<(f64, f64)> =
+            family.iter().map(offset_hz).map(|offset| (offset, response.closed_loop(offset).norm())).collect();
+        let is_strong = |(offset, gain): &(f64, f64), line: &Line| {
+            reach_hz.is_some_and(|reach| *offset <= reach)
+                && sideband_dbc(line.modulator.norm() * gain).is_some_and(|level| level > STRONG_LINE_DBC)
         };
-        let strong = family.iter().zip(&lines.family).any(|(tone, line)| is_strong(offset_hz(tone), line));
+        let strong = places.iter().zip(&lines.family).any(|(place, line)| is_strong(place, line));
         if strong {
             result.warnings.push(format!(
                 "a modulator line above {STRONG_LINE_DBC} dBc lies within {STRONG_LINE_REACH} loop bandwidths: the VCO follows it, so the detector's nonlinearity is not claimed and the modulator line alone is given"
@@ -376,16 +366,15 @@ impl Legal<'_> {
                     .to_owned(),
             );
         }
-        family
+        places
             .iter()
             .zip(&lines.family)
-            .map(|(tone, line)| {
-                let offset = offset_hz(tone);
-                let modulator = self.line_part(response, offset, line.modulator.norm(), loop_basis);
+            .map(|((_, gain), line)| {
+                let modulator = self.line_part(line.modulator.norm() * gain, loop_basis);
                 let nonlinearity = match line.nonlinearity {
                     _ if strong => Part::NotClaimed("the VCO follows a strong modulator line".to_owned()),
                     None => Part::Unknown("pump mismatch unknown".to_owned()),
-                    Some(value) => self.line_part(response, offset, value.norm(), detector_basis),
+                    Some(value) => self.line_part(value.norm() * gain, detector_basis),
                 };
                 LineLevel { modulator, nonlinearity, uncertainty_db: line.uncertainty_db }
             })
@@ -433,14 +422,14 @@ impl Legal<'_> {
                 let offset = Exact::new(i128::from(bin), i128::from(period))
                     .and_then(|share| share.times(&self.setup.pfd().hz()))
                     .map_err(|source| AssessError::Exact { channel: self.channel, source })?;
-                let offset_hz = offset_of(bin);
+                let gain = response.closed_loop(offset_of(bin)).norm();
                 let label = format!("{bin}/{period} of the PFD frequency");
                 let mut candidate = Candidate::new(Origin::SubFractional, label, Frequency::from_hz(offset));
                 candidate.level_uncertainty_db = line.uncertainty_db;
-                candidate.modulator = self.line_part(response, offset_hz, line.modulator.norm(), loop_basis);
+                candidate.modulator = self.line_part(line.modulator.norm() * gain, loop_basis);
                 candidate.nonlinearity = match line.nonlinearity {
                     None => Part::Unknown("pump mismatch unknown".to_owned()),
-                    Some(value) => self.line_part(response, offset_hz, value.norm(), detector_basis),
+                    Some(value) => self.line_part(value.norm() * gain, detector_basis),
                 };
                 Ok(candidate)
             })
@@ -475,19 +464,18 @@ impl Legal<'_> {
     fn fill_tones(&self, result: &mut ChannelResult, candidates: Vec<Candidate>, zone: &Zone) {
         let floor = self.plan().analysis.tone_floor_dbc;
         for candidate in candidates {
+            if candidate.is_below(floor) {
+                result.tones_below_floor += 1;
+                continue;
+            }
             let offset_hz = candidate.offset.to_f64_hz();
             let position = Position {
                 inside_guard: zone.in_guard(candidate.offset),
                 inside_loop: zone.in_loop(candidate.offset),
                 limit_dbc: limit_dbc(self.plan(), self.group, result.output_hz, offset_hz),
             };
-            let is_present = candidate.is_present();
             let mut tone: Tone = to_tone(candidate, position);
             tone.victims = hit(self.plan(), result.output_hz, offset_hz).map(|victim| victim.name.clone()).collect();
-            if !is_present || tone.level_dbc.is_some_and(|level| level < floor) {
-                result.tones_below_floor += 1;
-                continue;
-            }
             if tone.level_dbc.is_some_and(|level| level > SMALL_ANGLE_DBC) {
                 result.warnings.push(format!(
                     "a tone above {SMALL_ANGLE_DBC} dBc: the small-angle sideband formula is off by more than 0.1 dB"
@@ -499,6 +487,24 @@ impl Legal<'_> {
         result.warnings.sort();
         result.warnings.dedup();
     }
+}
+
+/// Returns the charge curve at a VCO frequency \[Hz\] and tuning voltage \[V\]; `None` while the mismatch is unknown.
+pub(super) fn charge_curve(plan: &Plan, vco_hz: f64, tuning_v: Option<f64>) -> Option<ChargeCurve> {
+    let detector = &plan.detector;
+    if let Some(table) = &detector.table {
+        return Some(ChargeCurve::from_table(table, detector.current_a, vco_hz));
+    }
+    let mismatch = match detector.mismatch.as_ref()? {
+        MismatchPoints::Constant(value) => *value,
+        MismatchPoints::Table(points) => interpolate(points, tuning_v?),
+    };
+    Some(ChargeCurve::from_terms(&ChargeTerms {
+        mismatch,
+        dead_zone_cycles: detector.dead_zone_s * vco_hz,
+        quadratic_per_cycle: detector.quadratic_per_cycle,
+        cubic_per_cycle2: detector.cubic_per_cycle2,
+    }))
 }
 
 /// Copies the noise figures into the result.

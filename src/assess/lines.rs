@@ -6,11 +6,11 @@ use num_traits::ToPrimitive;
 use crate::modulator::{ModulatorConfig, ModulatorError, Period, phase_numerators, start, transient};
 use crate::spectrum::{Density, DensitySettings, FftScratch, FftStage, SpectrumError, Window, correlate_each};
 use crate::tones::{
-    Charge, CurveError, CurveLine, FamilyTone, FoldedNoise, LONGEST_LATTICE, PhaseDensity, PhaseLattice, folded_noise,
-    harmonic, harmonic_on_lattice, lattice_is_short, level_uncertainty_db, line_noise_cycles2, settle,
-    settle_on_lattice, settle_samples,
+    Charge, CurveError, FamilyTone, FoldedNoise, LONGEST_LATTICE, PhaseDensity, lattice_is_short, level_uncertainty_db,
+    line_noise_cycles2, settle_samples,
 };
 
+use super::curve_point::CurvePoint;
 use super::result::Method;
 
 /// Buffers of one worker; they grow to the record length once.
@@ -58,8 +58,8 @@ pub struct FamilyLines {
     pub rest_cycles: Option<f64>,
     /// Noise that the nonlinearity folds into the loop, for sequences that are no exact period.
     pub folded: Option<FoldedNoise>,
-    /// Largest difference between a cut record and the curve, over the lines that stand above the record's noise \[dB\].
-    pub record_difference_db: Option<f64>,
+    /// Whether s_1 visits so few values that harmonics alias.
+    pub on_lattice: bool,
 }
 
 /// Why the lines of a channel cannot be computed.
@@ -95,6 +95,8 @@ pub struct LineInput<'a> {
     pub pfd_hz: f64,
     /// VCO frequency \[Hz\].
     pub vco_hz: f64,
+    /// The curve at this divider ratio, on the sequence's short lattice if it has one, where it is already known.
+    pub known_curve: Option<&'a CurvePoint>,
 }
 
 impl LineInput<'_> {
@@ -176,7 +178,7 @@ pub fn family_lines(input: &LineInput, fft: &FftStage, scratch: &mut Scratch) ->
     let whole = input.period.length.as_ref().and_then(ToPrimitive::to_u64).filter(|length| *length <= input.record);
     match whole {
         Some(length) if input.period.is_exact => exact_lines(input, length, fft, scratch),
-        _ if input.modulator.has_ideal_shaping() => curve_lines(input, scratch),
+        _ if input.modulator.has_ideal_shaping() => curve_lines(input),
         _ => windowed_lines(input, scratch),
     }
 }
@@ -234,38 +236,36 @@ fn exact_lines(
         period: Some(period),
         rest_cycles,
         folded: None,
-        record_difference_db: None,
+        on_lattice: false,
     })
 }
 
-/// Levels from the conditional mean of the charge given the first residue, checked by a cut record.
-fn curve_lines(input: &LineInput, scratch: &mut Scratch) -> Result<FamilyLines, LinesError> {
+/// Levels from the conditional mean of the charge given the first residue.
+fn curve_lines(input: &LineInput) -> Result<FamilyLines, LinesError> {
     let density = PhaseDensity::mash(input.modulator.order())?;
     let linear = |p: f64| p;
     let charge = input.charge.unwrap_or_else(|| Charge::new(&linear, &[]));
-    let reduced =
-        input.modulator.modulus().get() / num_integer::gcd(input.modulator.k(), input.modulator.modulus().get());
     let highest = input.family.iter().map(|tone| tone.harmonic).max().unwrap_or(1);
-    let lattice = (lattice_is_short(reduced, highest) && reduced <= LONGEST_LATTICE)
-        .then(|| PhaseLattice::new(&density, reduced, lattice_start(input.modulator)))
-        .transpose()?;
-    let rest = match &lattice {
-        Some(lattice) => settle_on_lattice(lattice, charge, input.target_cycles)?,
-        None => settle(&density, charge, input.target_cycles)?,
+    let lattice = short_lattice(input.modulator, highest);
+    let computed;
+    let point = match input.known_curve {
+        Some(known) => known,
+        None => {
+            computed = CurvePoint::new(&density, lattice, charge, input.target_cycles, highest)?;
+            &computed
+        }
     };
-    let folded = input.charge.map(|charge| folded_noise(&density, charge, rest.offset_cycles));
+    let folded = input.charge.map(|_| point.folded);
     let folded_cycles2 = folded.as_ref().map_or(0.0, |noise| noise.density_cycles2);
     let period = input.period.length.as_ref().and_then(ToPrimitive::to_f64);
-    let mut family: Vec<Line> = input
+    let family: Vec<Line> = input
         .family
         .iter()
         .map(|tone| {
-            let CurveLine { modulator, nonlinearity } = match &lattice {
-                Some(lattice) => harmonic_on_lattice(lattice, charge, rest.offset_cycles, tone.harmonic),
-                None => harmonic(&density, charge, rest.offset_cycles, tone.harmonic),
-            };
-            let square = square_line(input.modulator.order(), tone.harmonic) + 2.0 * rest.offset_cycles * modulator;
-            let nonlinearity = nonlinearity + input.pulse_position(tone.residue as f64) * square;
+            let line = point.line(tone.harmonic);
+            let modulator = line.modulator;
+            let square = square_line(input.modulator.order(), tone.harmonic) + 2.0 * point.rest_cycles * modulator;
+            let nonlinearity = line.nonlinearity + input.pulse_position(tone.residue as f64) * square;
             let size = (modulator + nonlinearity).norm();
             let noise = |cycles| line_noise_of(input, folded_cycles2, tone, cycles);
             Line {
@@ -276,17 +276,31 @@ fn curve_lines(input: &LineInput, scratch: &mut Scratch) -> Result<FamilyLines, 
             }
         })
         .collect();
-    let record_difference_db =
-        check_by_record(input, charge, rest.offset_cycles, folded_cycles2, &mut family, scratch)?;
     Ok(FamilyLines {
         method: Method::SharedCurve,
         family,
         others: Vec::new(),
         period: None,
-        rest_cycles: input.charge.map(|_| rest.offset_cycles),
+        rest_cycles: input.charge.map(|_| point.rest_cycles),
         folded,
-        record_difference_db,
+        on_lattice: lattice.is_some(),
     })
+}
+
+/// A short lattice of s_1: its number of points and where it begins.
+#[derive(Debug, Clone, Copy, PartialEq)]
+pub struct ShortLattice {
+    /// Reduced modulus M'.
+    pub points: u64,
+    /// First value \[cycles\].
+    pub start_cycles: f64,
+}
+
+/// Returns the lattice of a modulator where harmonics up to `highest` alias on it.
+pub(super) fn short_lattice(modulator: &ModulatorConfig, highest: u64) -> Option<ShortLattice> {
+    let points = modulator.modulus().get() / num_integer::gcd(modulator.k(), modulator.modulus().get());
+    (lattice_is_short(points, highest) && points <= LONGEST_LATTICE)
+        .then(|| ShortLattice { points, start_cycles: lattice_start(modulator) })
 }
 
 /// Returns (s_1(0) mod gcd(K, M))/M: where the lattice of the first residue begins.
@@ -301,46 +315,6 @@ fn lattice_start(config: &ModulatorConfig) -> f64 {
 fn line_noise_of(input: &LineInput, folded_cycles2: f64, tone: &FamilyTone, cycles: f64) -> f64 {
     let share = tone.residue.unsigned_abs() as f64 / input.modulator.modulus().get() as f64;
     line_noise_cycles2(folded_cycles2, input.modulator.order(), share * input.pfd_hz, input.pfd_hz, cycles)
-}
-
-/// Compares each line with the direct correlation over a cut record; where the two differ by more than the record's
-/// own noise explains, the difference becomes the line's uncertainty. Returns the largest such comparison.
-fn check_by_record(
-    input: &LineInput,
-    charge: Charge<'_>,
-    offset_cycles: f64,
-    folded_cycles2: f64,
-    family: &mut [Line],
-    scratch: &mut Scratch,
-) -> Result<Option<f64>, LinesError> {
-    if family.is_empty() {
-        return Ok(None);
-    }
-    let length = usize::try_from(input.record).map_err(|_| CurveError::NoSamples)?;
-    scratch.run(input.modulator, length)?;
-    scratch.bend(charge, offset_cycles);
-    // The sum of both parts, so that one correlation serves.
-    let bent: Vec<f64> = scratch.excess_cycles.iter().zip(&scratch.phase_cycles).map(|(e, p)| e + p).collect();
-    let window = Window::FourTerm;
-    let residues: Vec<u64> = input.family.iter().map(|tone| tone.residue.unsigned_abs()).collect();
-    let seen = correlate_each(&bent, &residues, input.modulator.modulus().get(), window);
-    let mut worst: Option<f64> = None;
-    for ((line, tone), found) in family.iter_mut().zip(input.family).zip(seen) {
-        let expected = (line.modulator + line.nonlinearity.unwrap_or_default()).norm();
-        let effective = input.record as f64 / window.noise_bandwidth_bins();
-        let noise = line_noise_of(input, folded_cycles2, tone, effective);
-        let Some(scatter_db) = level_uncertainty_db(expected, noise) else { continue };
-        if found.norm() == 0.0 {
-            continue;
-        }
-        let ratio = found.norm() / expected;
-        let difference_db = crate::base::db_from_power(ratio * ratio).abs();
-        worst = Some(worst.map_or(difference_db, |known| known.max(difference_db)));
-        if difference_db > scatter_db {
-            line.uncertainty_db = line.uncertainty_db.map(|known| known.max(difference_db));
-        }
-    }
-    Ok(worst)
 }
 
 /// Levels from a windowed record alone: for noise transfers that have no curve.
@@ -383,6 +357,6 @@ fn windowed_lines(input: &LineInput, scratch: &mut Scratch) -> Result<FamilyLine
         period: None,
         rest_cycles,
         folded: None,
-        record_difference_db: None,
+        on_lattice: false,
     })
 }

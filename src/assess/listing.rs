@@ -7,7 +7,7 @@ use crate::tones::{
     worst_case_sum_dbc,
 };
 
-use super::candidate::{Candidate, Part};
+use super::candidate::{Candidate, Label, Part};
 use super::placement::Placement;
 use super::result::Origin;
 
@@ -90,9 +90,9 @@ pub fn family_candidates(
             continue;
         }
         let (origin, label) = if tone.is_boundary {
-            (Origin::Boundary, format!("boundary {}/{}", tone.p, tone.harmonic))
+            (Origin::Boundary, Label::Boundary(tone.p, tone.harmonic))
         } else {
-            (Origin::Fractional, format!("{} × K/M", tone.harmonic))
+            (Origin::Fractional, Label::Multiple(tone.harmonic))
         };
         let mut candidate = Candidate::new(origin, label, offset);
         candidate.harmonic = Some(tone.harmonic);
@@ -124,8 +124,7 @@ pub fn raw_reference_candidates(scene: &Scene) -> Result<Vec<Candidate>, ExactEr
         if !near.lowest_terms || offset.hz().sign() == 0 || known || !scene.in_span(offset) {
             continue;
         }
-        let mut candidate =
-            Candidate::new(Origin::Boundary, format!("reference boundary {}/{}", near.p, near.q), offset);
+        let mut candidate = Candidate::new(Origin::Boundary, Label::ReferenceBoundary(near.p, near.q), offset);
         candidate.harmonic = Some(q);
         candidate.boundary = Some((near.p, q));
         let order = CouplingOrder { q, order: 1, base_residue: 0 };
@@ -206,7 +205,7 @@ pub fn reference_candidates(scene: &Scene, level_of: impl Fn(u64) -> Part) -> Re
     (1..=REFERENCE_HARMONICS)
         .map(|harmonic| {
             let offset = Frequency::from_hz(scene.pfd.hz().times(&Exact::from_integer(i128::from(harmonic)))?);
-            let mut candidate = Candidate::new(Origin::Reference, format!("PFD frequency × {harmonic}"), offset);
+            let mut candidate = Candidate::new(Origin::Reference, Label::Pfd(harmonic), offset);
             candidate.harmonic = Some(harmonic);
             candidate.leakage = level_of(harmonic);
             Ok(candidate)

@@ -2,6 +2,7 @@
 
 mod candidate;
 mod channel;
+mod curve_point;
 mod lines;
 mod listing;
 mod noise;
@@ -12,6 +13,8 @@ mod result;
 mod sequence;
 mod setup;
 mod simulate;
+mod smooth_table;
+mod tables;
 mod tolerance;
 mod verdict;
 mod victims;
@@ -19,6 +22,7 @@ mod view;
 mod whole_period;
 mod zone;
 
+pub use curve_point::CurvePoint;
 pub use lines::{FamilyLines, Line, LinesError, PeriodLine, Scratch};
 pub use noise::{ChannelNoise, ModulatorShare, budget_of, channel_budget};
 pub use offset_sweep::{OffsetSweep, OffsetTried, offset_sweep};

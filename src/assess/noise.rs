@@ -4,7 +4,7 @@ use std::f64::consts::TAU;
 
 use crate::base::{Frequency, db_from_power, power_from_db};
 use crate::loop_model::{LoopResponse, NoiseBudget, NoiseInput, PhaseFigures, log_grid, noise_budget};
-use crate::modulator::ModulatorConfig;
+use crate::modulator::{Dither, Modulus};
 use crate::plan::ChannelGroup;
 use crate::spectrum::ideal_density;
 
@@ -50,44 +50,79 @@ pub fn channel_budget(
     lines: Option<&FamilyLines>,
     offset_hz: Vec<f64>,
 ) -> NoiseBudget {
+    let is_dense = lines.is_some_and(|lines| lines.period.is_none());
+    let folded = lines.filter(|_| is_dense).map(|lines| lines.folded.as_ref().map(|noise| noise.density_cycles2));
+    let point = BudgetPoint {
+        divider: placement.divider_ratio(),
+        vco_hz: placement.vco.to_f64_hz(),
+        output_divider: placement.output_divider,
+        order: is_dense.then(|| placement.modulator.order()),
+        dither: dither_step(placement.modulator.dither(), placement.modulator.modulus()),
+        folded_cycles2: folded,
+    };
+    budget_at(setup, &point, response, offset_hz)
+}
+
+/// What the noise of a channel depends on besides plan and loop.
+#[derive(Debug, Clone, Copy, PartialEq)]
+pub(super) struct BudgetPoint {
+    /// N + K/M.
+    pub divider: f64,
+    /// VCO frequency \[Hz\].
+    pub vco_hz: f64,
+    /// Output divider P.
+    pub output_divider: u64,
+    /// Order of a modulator with noise instead of lines.
+    pub order: Option<u8>,
+    /// Stage and step (share of a cycle) of the dither.
+    pub dither: Option<(u8, f64)>,
+    /// What the detector folds \[cycles²\]; outer `None`: nothing is folded, inner `None`: unknown.
+    pub folded_cycles2: Option<Option<f64>>,
+}
+
+/// Returns the noise budget at a point on a grid of offsets \[Hz\].
+pub(super) fn budget_at(
+    setup: &Setup,
+    point: &BudgetPoint,
+    response: &LoopResponse,
+    offset_hz: Vec<f64>,
+) -> NoiseBudget {
     let plan = setup.plan();
     let detector = &plan.detector;
-    let vco_hz = placement.vco.to_f64_hz();
     let pfd_hz = setup.pfd().to_f64_hz();
-    let order = placement.modulator.order();
-    let shaped =
-        |offset: f64| ideal_density(order, offset, pfd_hz) + dither_density(&placement.modulator, offset, pfd_hz);
-    let is_dense = lines.is_some_and(|lines| lines.period.is_none());
-    // (2π)²·S_0/f_pfd turns cycles² per line spacing into rad²/Hz.
-    let folded = lines
-        .filter(|_| is_dense)
-        .map(|lines| lines.folded.as_ref().map(|noise| TAU * TAU * noise.density_cycles2 / pfd_hz));
+    let order = point.order.unwrap_or(0);
+    let shaped = |offset: f64| ideal_density(order, offset, pfd_hz) + dither_density(point.dither, offset, pfd_hz);
     let input = NoiseInput {
         response,
         network: setup.network(),
-        divider: placement.divider_ratio(),
-        vco_hz,
+        divider: point.divider,
+        vco_hz: point.vco_hz,
         reference_hz: plan.reference.frequency.to_f64_hz(),
-        output_divider: placement.output_divider as f64,
+        output_divider: point.output_divider as f64,
         current_a: detector.current_a,
-        gain_hz_per_v: gain_at(&plan.oscillator.gain, vco_hz),
+        gain_hz_per_v: gain_at(&plan.oscillator.gain, point.vco_hz),
         reference: plan.reference.noise.as_ref(),
         oscillator: plan.oscillator.noise.as_ref(),
         floor_dbc_per_hz: detector.floor_dbc_per_hz,
         flicker_dbc_per_hz: detector.flicker_dbc_per_hz,
         offset_noise_a_per_rthz: (detector.offset_current_a != 0.0).then_some(detector.offset_noise_a_per_rthz),
         divider_floor_dbc_per_hz: plan.divider.floor_dbc_per_hz,
-        modulator: is_dense.then_some(&shaped as &dyn Fn(f64) -> f64),
-        folded_rad2_per_hz: folded,
+        modulator: point.order.is_some().then_some(&shaped as &dyn Fn(f64) -> f64),
+        // (2π)²·S_0/f_pfd turns cycles² per line spacing into rad²/Hz.
+        folded_rad2_per_hz: point.folded_cycles2.map(|known| known.map(|cycles2| TAU * TAU * cycles2 / pfd_hz)),
     };
     noise_budget(&input, offset_hz)
 }
 
+/// Returns stage and step of a dither: its weight over the modulus.
+pub(super) fn dither_step(dither: Dither, modulus: Modulus) -> Option<(u8, f64)> {
+    dither.stage_and_weight().map(|(stage, weight)| (stage, weight as f64 / modulus.get() as f64))
+}
+
 /// Returns the dither's own phase noise \[rad²/Hz, single sideband\]: a fair bit of weight w at stage r,
 /// `(2π)²·w²/(4·M²·f_pfd)·[2 sin(πf/f_pfd)]^(2(r − 2))`.
-fn dither_density(modulator: &ModulatorConfig, offset_hz: f64, pfd_hz: f64) -> f64 {
-    let Some((stage, weight)) = modulator.dither().stage_and_weight() else { return 0.0 };
-    let step = weight as f64 / modulator.modulus().get() as f64;
+fn dither_density(dither: Option<(u8, f64)>, offset_hz: f64, pfd_hz: f64) -> f64 {
+    let Some((stage, step)) = dither else { return 0.0 };
     let shape = 2.0 * (std::f64::consts::PI * offset_hz / pfd_hz).sin();
     TAU * TAU * step * step / (4.0 * pfd_hz) * shape.powi(2 * (i32::from(stage) - 2))
 }
@@ -124,9 +159,13 @@ pub fn channel_noise(
     tones: &[Tone],
 ) -> ChannelNoise {
     let limits = group.limits.integration_hz;
-    let budget = channel_budget(setup, placement, response, lines, log_grid(limits.0, limits.1));
-    let mut unknown = budget.unknown.clone();
-    let known = PhaseFigures::of(&budget.offset_hz, &budget.known(), limits);
+    let (known, mut unknown) = match setup.tabulated_noise(placement, lines, limits) {
+        Some(found) => found,
+        None => {
+            let budget = channel_budget(setup, placement, response, lines, log_grid(limits.0, limits.1));
+            (PhaseFigures::of(&budget.offset_hz, &budget.known(), limits), budget.unknown)
+        }
+    };
     let (known, nonlinearity_known) = with_period_lines(known, setup, placement, response, lines, (limits, tones));
     if !nonlinearity_known {
         unknown.push("detector nonlinearity on the lines of the period".to_owned());

@@ -130,7 +130,7 @@ fn place_with(
 }
 
 /// Returns the tuning voltage at a frequency by linear interpolation; `None` outside the curve.
-fn tuning_voltage(curve: &[(f64, f64)], frequency_hz: f64) -> Option<f64> {
+pub(super) fn tuning_voltage(curve: &[(f64, f64)], frequency_hz: f64) -> Option<f64> {
     curve.windows(2).find(|pair| pair[0].1 <= frequency_hz && frequency_hz <= pair[1].1).map(|pair| {
         let ((v0, f0), (v1, f1)) = (pair[0], pair[1]);
         v0 + (v1 - v0) * (frequency_hz - f0) / (f1 - f0)

@@ -12,6 +12,7 @@ use crate::tones::{AnchorLevel, Mechanism, Transfer, fitted_anchors, nearest_fra
 
 use super::lines::{LinesError, Scratch};
 use super::placement::{Placement, PlacementError, place};
+use super::tables::Tables;
 use super::verdict::hertz;
 
 /// Distance from the fit above which anchors of one coupling are said not to agree \[dB\].
@@ -99,6 +100,9 @@ pub struct Setup<'p> {
     fft: FftStage,
     warnings: Vec<String>,
     fits: Vec<Assumption>,
+    /// Smallest and largest N + K/M over the legal channels.
+    ratios: (f64, f64),
+    tables: Option<Tables>,
 }
 
 impl<'p> Setup<'p> {
@@ -142,6 +146,8 @@ impl<'p> Setup<'p> {
             clock_anchors: Vec::new(),
             fft: FftStage::new(),
             fits: Vec::new(),
+            ratios: (smallest, largest),
+            tables: None,
         };
         setup.carry_anchors()?;
         setup.warnings.extend(unused(plan));
@@ -176,7 +182,55 @@ impl<'p> Setup<'p> {
             clock_anchors: self.clock_anchors.clone(),
             fft: FftStage::new(),
             fits: self.fits.clone(),
+            ratios: (smallest, largest),
+            tables: None,
         })
+    }
+
+    /// Returns the setup with loop, curve and noise tabulated over N + K/M, for plans of many channels; each table is
+    /// checked against the direct route while it is built, and what is not smooth stays direct.
+    #[must_use]
+    pub fn tabulated(mut self) -> Self {
+        let tables = Tables::new(&self, self.ratios);
+        self.tables = Some(tables);
+        self
+    }
+
+    /// Returns the setup on the direct route, with the same filter and anchors.
+    #[must_use]
+    pub fn direct(&self) -> Self {
+        Self {
+            plan: self.plan,
+            pfd: self.pfd,
+            source: self.source.clone(),
+            components: self.components,
+            design_divider: self.design_divider,
+            design_response: self.design_response.clone(),
+            carried: self.carried.clone(),
+            anchors: self.anchors.clone(),
+            clock_anchors: self.clock_anchors.clone(),
+            fft: FftStage::new(),
+            warnings: self.warnings.clone(),
+            fits: self.fits.clone(),
+            ratios: self.ratios,
+            tables: None,
+        }
+    }
+
+    /// Makes the tables wrong by a factor, for the test of the run's own check.
+    #[cfg(test)]
+    pub(crate) fn bend_tables(&mut self, curve_by: f64, noise_by: f64) {
+        self.tables.as_mut().expect("a tabulated setup").bend(curve_by, noise_by);
+    }
+
+    /// Returns the tables; `None` on the direct route.
+    pub(super) fn tables(&self) -> Option<&Tables> {
+        self.tables.as_ref()
+    }
+
+    /// Returns the source of every channel's loop.
+    pub(super) fn source(&self) -> &LoopSource {
+        &self.source
     }
 
     /// Returns the plan.
@@ -327,7 +381,11 @@ impl<'p> Setup<'p> {
     /// # Errors
     /// `LoopModelError`: an unstable loop above all.
     pub fn response(&self, placement: &Placement) -> Result<LoopResponse, LoopModelError> {
-        response_of(self.plan, &self.source, placement.divider_ratio(), self.pfd)
+        let divider = placement.divider_ratio();
+        match self.tables.as_ref().and_then(|tables| tables.response(self, divider)) {
+            Some(response) => Ok(response),
+            None => response_of(self.plan, &self.source, divider, self.pfd),
+        }
     }
 
     /// Carries every anchor to the place where it was taken; one that has no place is left out with a warning.
@@ -447,10 +505,12 @@ fn unused(plan: &Plan) -> Vec<String> {
 
 /// Returns what a loop does to a tone.
 pub(super) fn transfer_of(response: &LoopResponse, offset_hz: f64, output_divider: u64) -> Transfer {
+    let closed_loop = response.closed_loop(offset_hz);
     Transfer {
         offset_hz,
-        closed_loop: response.closed_loop(offset_hz).norm(),
-        error: response.error(offset_hz).norm(),
+        closed_loop: closed_loop.norm(),
+        // E = 1 − H, without a second evaluation.
+        error: (1.0 - closed_loop).norm(),
         output_divider: output_divider as f64,
     }
 }

@@ -16,6 +16,9 @@ use super::setup::{AssessError, Setup};
 /// Outputs generated at a time.
 const BLOCK: usize = 1 << 14;
 
+/// Cycles that share a table of turns.
+const STRETCH: usize = 256;
+
 /// One line found by both routes.
 #[derive(Debug, Clone, Copy, PartialEq)]
 pub struct LineCheck {
@@ -68,16 +71,23 @@ fn correlate_period(
     let modulus = config.modulus().get();
     let scale = 1.0 / modulus as f64;
     let mean = mean_phase(config, period)?;
+    // Turns of one stretch; the stretch itself is turned by its own exact integer.
+    let residue_of = |n: usize| u128::from(residue) * n as u128 % u128::from(modulus);
+    let turns: Vec<Complex64> = (0..STRETCH).map(|n| Complex64::cis(-TAU * (residue_of(n) as f64 * scale))).collect();
     let mut sum = Complex64::ZERO;
-    let mut turn: u64 = 0;
+    let mut stretch = Complex64::ZERO;
+    let (mut place, mut start) = (0, 0u128);
+    let turned = |start: u128, stretch: Complex64| Complex64::cis(-TAU * (start as f64 * scale)) * stretch;
     for_each_phase(config, period, |numerator| {
-        let angle = -TAU * (turn as f64 * scale);
-        sum += Complex64::cis(angle) * charge(numerator as f64 * scale - mean);
-        turn += residue;
-        if turn >= modulus {
-            turn -= modulus;
+        stretch += turns[place] * charge(numerator as f64 * scale - mean);
+        place += 1;
+        if place == STRETCH {
+            sum += turned(start, stretch);
+            start = (start + residue_of(STRETCH)) % u128::from(modulus);
+            (place, stretch) = (0, Complex64::ZERO);
         }
     })?;
+    sum += turned(start, stretch);
     Ok(sum / period as f64)
 }
 

@@ -4,7 +4,7 @@ use std::cmp::Ordering;
 use std::fmt;
 
 use num_rational::Ratio;
-use num_traits::{CheckedAdd, CheckedDiv, CheckedMul, CheckedSub, Signed, ToPrimitive, Zero};
+use num_traits::{CheckedAdd, CheckedSub, Signed, ToPrimitive, Zero};
 use serde::{Serialize, Serializer};
 use thiserror::Error;
 
@@ -46,7 +46,7 @@ impl Exact {
         if numerator == i128::MIN || denominator == i128::MIN {
             return Err(ExactError::Overflow);
         }
-        Ok(Self(Ratio::new(numerator, denominator)))
+        Ok(Self(reduced(numerator, denominator)))
     }
 
     /// Returns an integer as an exact number.
@@ -72,6 +72,10 @@ impl Exact {
     /// # Errors
     /// `Overflow` beyond 127 bits.
     pub fn plus(&self, other: &Self) -> Result<Self, ExactError> {
+        if self.denominator() == other.denominator() {
+            let sum = self.numerator().checked_add(other.numerator()).ok_or(ExactError::Overflow)?;
+            return Ok(Self(reduced(sum, self.denominator())));
+        }
         self.0.checked_add(&other.0).map(Self).ok_or(ExactError::Overflow)
     }
 
@@ -80,6 +84,10 @@ impl Exact {
     /// # Errors
     /// `Overflow` beyond 127 bits.
     pub fn minus(&self, other: &Self) -> Result<Self, ExactError> {
+        if self.denominator() == other.denominator() {
+            let difference = self.numerator().checked_sub(other.numerator()).ok_or(ExactError::Overflow)?;
+            return Ok(Self(reduced(difference, self.denominator())));
+        }
         self.0.checked_sub(&other.0).map(Self).ok_or(ExactError::Overflow)
     }
 
@@ -88,7 +96,7 @@ impl Exact {
     /// # Errors
     /// `Overflow` beyond 127 bits.
     pub fn times(&self, other: &Self) -> Result<Self, ExactError> {
-        self.0.checked_mul(&other.0).map(Self).ok_or(ExactError::Overflow)
+        product((self.numerator(), self.denominator()), (other.numerator(), other.denominator()))
     }
 
     /// Returns the quotient.
@@ -99,13 +107,23 @@ impl Exact {
         if other.0.is_zero() {
             return Err(ExactError::DivisionByZero);
         }
-        self.0.checked_div(&other.0).map(Self).ok_or(ExactError::Overflow)
+        let (numerator, denominator) = (other.numerator(), other.denominator());
+        // The sign belongs above the line; the negative of i128::MIN does not exist and never occurs.
+        let reciprocal = if numerator < 0 {
+            (-denominator, numerator.checked_neg().ok_or(ExactError::Overflow)?)
+        } else {
+            (denominator, numerator)
+        };
+        product((self.numerator(), self.denominator()), reciprocal)
     }
 
     /// Returns the largest integer not above the number.
     #[must_use]
     pub fn floor(&self) -> i128 {
-        self.numerator().div_euclid(self.denominator())
+        match (i64::try_from(self.numerator()), i64::try_from(self.denominator())) {
+            (Ok(numerator), Ok(denominator)) => i128::from(numerator.div_euclid(denominator)),
+            _ => self.numerator().div_euclid(self.denominator()),
+        }
     }
 
     /// Returns the nearest integer; a tie goes to the even one.
@@ -159,6 +177,14 @@ impl Exact {
     /// Returns the nearest double: for display and for physics, never for a decision on a word or a boundary.
     #[must_use]
     pub fn to_f64(&self) -> f64 {
+        // Of integers that doubles hold exactly the quotient is correctly rounded.
+        const EXACT: std::ops::RangeInclusive<i64> = -(1 << 53)..=1 << 53;
+        if let (Ok(numerator), Ok(denominator)) = (i64::try_from(self.numerator()), i64::try_from(self.denominator()))
+            && EXACT.contains(&numerator)
+            && EXACT.contains(&denominator)
+        {
+            return numerator as f64 / denominator as f64;
+        }
         // Both parts pass f64 only above 2^1023: `to_f64` of a Ratio<i128> is always finite.
         self.0.to_f64().unwrap_or(f64::NAN)
     }
@@ -177,6 +203,47 @@ impl Exact {
     }
 }
 
+/// Returns the greatest common divisor; in 64 bits where both fit, which is most of the work in a survey.
+fn gcd(a: i128, b: i128) -> i128 {
+    match (u64::try_from(a.unsigned_abs()), u64::try_from(b.unsigned_abs())) {
+        (Ok(a), Ok(b)) => i128::from(num_integer::gcd(a, b)),
+        _ => num_integer::gcd(a, b),
+    }
+}
+
+/// Returns a/b rounded towards zero; in 64 bits where both fit.
+fn quotient(a: i128, b: i128) -> i128 {
+    match (i64::try_from(a), i64::try_from(b)) {
+        (Ok(a), Ok(b)) if b != -1 => i128::from(a / b),
+        _ => a / b,
+    }
+}
+
+/// Returns numerator over denominator (not zero, neither i128::MIN) in lowest terms.
+fn reduced(numerator: i128, denominator: i128) -> Ratio<i128> {
+    let shared = if denominator == 1 { 1 } else { gcd(numerator, denominator) };
+    let shared = if denominator < 0 { -shared } else { shared };
+    if shared == 1 {
+        return Ratio::new_raw(numerator, denominator);
+    }
+    Ratio::new_raw(quotient(numerator, shared), quotient(denominator, shared))
+}
+
+/// Returns the product of two fractions in lowest terms with positive denominators.
+fn product(a: (i128, i128), b: (i128, i128)) -> Result<Exact, ExactError> {
+    if a.0 == 0 || b.0 == 0 {
+        return Ok(Exact::ZERO);
+    }
+    // Divided crosswise first, the product is in lowest terms.
+    let (left, right) = (gcd(a.0, b.1), gcd(b.0, a.1));
+    let numerator = quotient(a.0, left).checked_mul(quotient(b.0, right));
+    let denominator = quotient(a.1, right).checked_mul(quotient(b.1, left));
+    match (numerator, denominator) {
+        (Some(numerator), Some(denominator)) => Ok(Exact(Ratio::new_raw(numerator, denominator))),
+        _ => Err(ExactError::Overflow),
+    }
+}
+
 impl PartialOrd for Exact {
     fn partial_cmp(&self, other: &Self) -> Option<Ordering> {
         Some(self.cmp(other))
@@ -185,6 +252,9 @@ impl PartialOrd for Exact {
 
 impl Ord for Exact {
     fn cmp(&self, other: &Self) -> Ordering {
+        if self.denominator() == other.denominator() {
+            return self.numerator().cmp(&other.numerator());
+        }
         // Ratio's own ordering compares by continued fractions and cannot overflow.
         self.0.cmp(&other.0)
     }
@@ -284,6 +354,8 @@ fn decimal(value: &Exact) -> Option<String> {
 
 #[cfg(test)]
 mod tests {
+    use num_traits::{CheckedDiv, CheckedMul};
+
     use super::*;
 
     fn exact(numerator: i128, denominator: i128) -> Exact {
@@ -311,6 +383,42 @@ mod tests {
         for (n, d, want) in cases {
             assert_eq!(exact(n, d).round_half_even(), want, "{n}/{d}");
         }
+    }
+
+    #[test]
+    fn agrees_with_plain_rationals() {
+        let mut state = 7u64;
+        let mut next = |bits: u32| {
+            state = state.wrapping_mul(6_364_136_223_846_793_005).wrapping_add(1_442_695_040_888_963_407);
+            i128::from(state.cast_signed() >> (63 - bits))
+        };
+        let mut checked = 0;
+        for round in 0..40_000u32 {
+            // Small, 64-bit and larger parts, both signs.
+            let bits = 2 + round % 61;
+            let scale = if round % 3 == 0 { 1i128 << (round % 30) } else { 1 };
+            let parts = [next(bits) * scale, next(bits) * scale, next(bits), next(bits)];
+            let (a, b) = ((parts[0] - scale, parts[1].abs() + 1), (parts[2] - 1, parts[3].abs() + 1));
+            let sign = if round % 2 == 0 { -1 } else { 1 };
+            let (ours, plain) = (exact(a.0 * sign, a.1 * sign), Ratio::new(a.0 * sign, a.1 * sign));
+            let (other, plain_other) = (exact(b.0, b.1), Ratio::new(b.0, b.1));
+            assert_eq!(ours.0, plain);
+            let same = |found: Result<Exact, ExactError>, want: Option<Ratio<i128>>| {
+                assert_eq!(found.ok().map(|found| found.0), want, "{a:?} {b:?}");
+            };
+            same(ours.plus(&other), plain.checked_add(&plain_other));
+            same(ours.minus(&other), plain.checked_sub(&plain_other));
+            same(ours.times(&other), plain.checked_mul(&plain_other));
+            if plain_other.is_zero() {
+                assert_eq!(ours.over(&other), Err(ExactError::DivisionByZero));
+            } else {
+                same(ours.over(&other), plain.checked_div(&plain_other));
+            }
+            assert_eq!(ours.cmp(&other), plain.cmp(&plain_other));
+            assert_eq!(ours.to_f64(), plain.to_f64().unwrap());
+            checked += 1;
+        }
+        assert_eq!(checked, 40_000);
     }
 
     #[test]

@@ -2,14 +2,14 @@
 
 use std::path::{Path, PathBuf};
 
-use crate::assess::AssessError;
+use crate::assess::{AssessError, ChannelResult};
 use crate::decide::dossier::{Dossier, MOST_CHANNELS, dossier, noise_budget, steps};
 use crate::plan::{Plan, demo_plan};
 use crate::report::{
-    Detail, RenderOptions, ReportError, ReportFile, add_files, beat_files, beats_text, check_target, pdf, render_with,
-    survey_json, write_set,
+    ChannelRows, Detail, RenderOptions, ReportError, ReportFile, StreamedSet, add_files, assemble, beat_files,
+    beats_text, check_target, document_files, pdf, read_file, survey_json, write_set,
 };
-use crate::survey::{SurveyResult, beats, survey};
+use crate::survey::{Keep, Steps, SurveyResult, beats, survey, survey_in_blocks};
 
 use super::arguments::{CuresChoice, DetailChoice, FailOn, SurveyArguments};
 use super::failure::Failure;
@@ -34,10 +34,6 @@ pub fn run(arguments: &SurveyArguments) -> Result<(), Failure> {
     let out = arguments.out.clone().unwrap_or_else(|| PathBuf::from("reports").join(&plan.stem));
     check_target(&out).map_err(report_failure)?;
     let channels: u64 = plan.groups.iter().map(|group| group.channels.len()).sum();
-    let bar = Bar::new(channels, "channels", voice);
-    let result = in_pool(arguments.common.jobs, || survey(&plan, &|items| bar.advance(items)))?
-        .map_err(|error| assess_failure(&plan, &error))?;
-    bar.finish();
     let detail = match arguments.detail {
         Some(DetailChoice::All) => Detail::All,
         Some(DetailChoice::Flagged) => Detail::Flagged,
@@ -45,15 +41,29 @@ pub fn run(arguments: &SurveyArguments) -> Result<(), Failure> {
         None => Detail::All,
     };
     let options = RenderOptions { detail, markdown: arguments.markdown, png: arguments.png };
+    let bar = Bar::new(channels, "channels", voice);
+    // Beats and cures look at every channel again, so all are kept then.
+    let is_streamed =
+        channels > FULL_DETAIL_CHANNELS && neighbours.is_empty() && arguments.cures != CuresChoice::Always;
+    let surveyed = if is_streamed {
+        in_pool(arguments.common.jobs, || streamed(&plan, &out, &options, &bar))?
+    } else {
+        let whole = || survey(&plan, &|items| bar.advance(items)).map(|result| (result, None)).map_err(Stopped::from);
+        in_pool(arguments.common.jobs, whole)?
+    };
+    let (result, stream) = surveyed.map_err(|stopped| match stopped {
+        Stopped::Assess(error) => assess_failure(&plan, &error),
+        Stopped::Report(error) => report_failure(error),
+    })?;
+    bar.finish();
     let dossier = in_pool(arguments.common.jobs, || decisions(&result, arguments.cures, voice))?
         .map_err(|error| assess_failure(&plan, &error))?;
-    let mut set = render_with(&result, &dossier, &options).map_err(report_failure)?;
-    if arguments.pdf {
-        let page = set.get("report.html").unwrap_or_default();
-        let bytes = pdf(page, std::env::var_os("THORNMAP_CHROMIUM").as_ref()).map_err(report_failure)?;
-        set.add(ReportFile { path: "report.pdf".into(), bytes });
+    let files = files(&result, &dossier, &options, arguments.pdf).map_err(report_failure)?;
+    match stream {
+        Some(set) => set.finish(&result, files, &options),
+        None => assemble(&result, files, &options).and_then(|set| write_set(&out, &set)),
     }
-    write_set(&out, &set).map_err(report_failure)?;
+    .map_err(report_failure)?;
     if !neighbours.is_empty() {
         let found = in_pool(arguments.common.jobs, || beats(&result.channels, &plan, &neighbours))?
             .map_err(|error| assess_failure(&plan, &error))?;
@@ -71,7 +81,12 @@ pub fn run(arguments: &SurveyArguments) -> Result<(), Failure> {
     }
     voice.say(&verdict_line(&result, &out));
     if arguments.common.json {
-        output::print(&survey_json(&result, &options).map_err(report_failure)?)?;
+        let text = if is_streamed {
+            String::from_utf8_lossy(&read_file(&out.join("survey.json")).map_err(report_failure)?).into_owned()
+        } else {
+            survey_json(&result, &options).map_err(report_failure)?
+        };
+        output::print(&text)?;
     }
     flagged(arguments.common.fail_on, result.summary.bad, result.summary.marginal)
 }
@@ -90,6 +105,56 @@ fn decisions(result: &SurveyResult, cures: CuresChoice, voice: Voice) -> Result<
     let found = dossier(result, &|| bar.advance(1));
     bar.finish();
     found
+}
+
+/// Returns the page and its pictures, printed as well where that is asked for.
+fn files(
+    result: &SurveyResult,
+    dossier: &Dossier,
+    options: &RenderOptions,
+    is_printed: bool,
+) -> Result<Vec<ReportFile>, ReportError> {
+    let mut files = document_files(result, dossier, options)?;
+    let page = files.iter().find(|file| file.path == "report.html").filter(|_| is_printed);
+    if let Some(page) = page {
+        let bytes = pdf(&page.bytes, std::env::var_os("THORNMAP_CHROMIUM").as_ref())?;
+        files.push(ReportFile { path: "report.pdf".into(), bytes });
+    }
+    Ok(files)
+}
+
+/// Why a survey that writes as it goes stops.
+enum Stopped {
+    Assess(AssessError),
+    Report(ReportError),
+}
+
+impl From<AssessError> for Stopped {
+    fn from(error: AssessError) -> Self {
+        Self::Assess(error)
+    }
+}
+
+impl From<ReportError> for Stopped {
+    fn from(error: ReportError) -> Self {
+        Self::Report(error)
+    }
+}
+
+/// Surveys a large plan: rows go to disk as they come, and the result holds the worst channels and a sample.
+fn streamed(
+    plan: &Plan,
+    out: &Path,
+    options: &RenderOptions,
+    bar: &Bar,
+) -> Result<(SurveyResult, Option<StreamedSet>), Stopped> {
+    let mut set = StreamedSet::new(out)?;
+    let steps = Steps {
+        render: &|channels: &[ChannelResult]| Ok::<_, Stopped>(ChannelRows::new(channels, options)?),
+        done: &|items| bar.advance(items),
+    };
+    let result = survey_in_blocks(plan, Keep::WorstAndSample, &steps, &mut |rows| Ok(set.add(&rows)?))?;
+    Ok((result, Some(set)))
 }
 
 /// Returns the run in one sentence.

@@ -20,7 +20,7 @@ pub use network::{FilterNetwork, Pole, Resistor};
 pub use noise_budget::{FILTER_TEMPERATURE_K, NoiseBudget, NoiseInput, NoiseSource, log_grid, noise_budget};
 pub use noise_points::{BOLTZMANN_J_PER_K, NoiseRole, detector_flicker_dbc_per_hz, detector_floor_dbc_per_hz};
 pub use reference_tone::{reference_tone_dbc, ripple_tone_dbc};
-pub use response::{LoopPoint, LoopResponse};
+pub use response::{LoopFigures, LoopPoint, LoopResponse};
 pub use settings::{ChargeTable, FilterComponents, LoopModelError, NoisePoints, OscillatorNoise, ResponseTable};
 pub use simulation::{Sample, SimulatedDetector, Simulation, SimulationError, SimulationInput, Within};
 pub use step_response::StepResponse;

@@ -29,6 +29,19 @@ pub struct LoopPoint {
     pub pfd_hz: f64,
 }
 
+/// The figures of a response that take a search over frequency.
+#[derive(Debug, Clone, Copy, PartialEq)]
+pub struct LoopFigures {
+    /// Frequency at which |A| = 1 \[Hz\].
+    pub unity_gain_hz: Option<f64>,
+    /// Phase margin of A \[deg\].
+    pub phase_margin_deg: Option<f64>,
+    /// Largest |H|, a ratio.
+    pub peak_gain: Option<f64>,
+    /// Frequency at which |H| has fallen by 3 dB for good \[Hz\].
+    pub closed_loop_3db_hz: Option<f64>,
+}
+
 /// The loop on one channel.
 ///
 /// `A(s) = I_cp·K_vco·Z(s)/(s·(N + K/M))` with s = j2πf and K_vco in Hz/V. The detector samples:
@@ -39,7 +52,8 @@ pub struct LoopResponse {
     pfd_hz: f64,
     unity_gain_hz: Option<f64>,
     phase_margin_deg: Option<f64>,
-    peak: Option<(f64, f64)>,
+    /// Largest |H|.
+    peak_gain: Option<f64>,
     closed_loop_3db_hz: Option<f64>,
 }
 
@@ -83,16 +97,18 @@ impl Terms {
     /// before it, half a step lower (that gives the limit of Gardner 1980).
     fn sampled(&self, s: Complex64, pfd_hz: f64) -> Complex64 {
         let half = 0.5 / pfd_hz;
-        let origin = coth(s * half);
+        // e^(−sT) once: a pole only makes it smaller by e^(−pT).
+        let turned = (-2.0 * half * s).exp();
+        let origin = coth(turned);
         let square = origin * origin - 1.0;
-        let poles: Complex64 = self.poles.iter().map(|(rate, residue)| coth((s + rate) * half) * *residue).sum();
+        let poles: Complex64 =
+            self.poles.iter().map(|(rate, residue)| coth(turned * (-2.0 * half * rate).exp()) * *residue).sum();
         (square * (self.double * half) + origin * self.single + poles - self.step) * half
     }
 }
 
-/// Returns coth z for Re z ≥ 0; large arguments give 1 without overflow.
-fn coth(z: Complex64) -> Complex64 {
-    let decayed = (-2.0 * z).exp();
+/// Returns coth z from e^(−2z), Re z ≥ 0; for large z it is 1 without overflow.
+fn coth(decayed: Complex64) -> Complex64 {
     (1.0 + decayed) / (1.0 - decayed)
 }
 
@@ -119,7 +135,7 @@ impl LoopResponse {
             pfd_hz: point.pfd_hz,
             unity_gain_hz: None,
             phase_margin_deg: None,
-            peak: None,
+            peak_gain: None,
             closed_loop_3db_hz: None,
         };
         let unity = response.crossing(|f| response.open_loop(f).map(|a| a.norm_sqr()));
@@ -133,6 +149,41 @@ impl LoopResponse {
         response.check_growth()?;
         response.scan();
         Ok(response)
+    }
+
+    /// Returns the response of a stable network at a checked point whose figures are already known.
+    ///
+    /// # Examples
+    /// ```
+    /// use thornmap::loop_model::{FilterComponents, FilterNetwork, LoopPoint, LoopResponse};
+    /// let network = FilterNetwork::new(&FilterComponents {
+    ///     c1_farad: Some(580e-12), r2_ohm: 6800.0, c2_farad: 2.8e-9, r3_c3: None, r4_c4: None,
+    /// }).unwrap();
+    /// let point = LoopPoint { current_a: 2.5e-3, gain_hz_per_v: 32e6, divider: 88.0, pfd_hz: 19.2e6 };
+    /// let found = LoopResponse::new(&network, point).unwrap();
+    /// assert_eq!(LoopResponse::with_figures(&network, point, found.figures()), found);
+    /// ```
+    #[must_use]
+    pub fn with_figures(network: &FilterNetwork, point: LoopPoint, figures: LoopFigures) -> Self {
+        Self {
+            form: Form::Network(Terms::new(network, &point)),
+            pfd_hz: point.pfd_hz,
+            unity_gain_hz: figures.unity_gain_hz,
+            phase_margin_deg: figures.phase_margin_deg,
+            peak_gain: figures.peak_gain,
+            closed_loop_3db_hz: figures.closed_loop_3db_hz,
+        }
+    }
+
+    /// Returns the figures that took a search.
+    #[must_use]
+    pub fn figures(&self) -> LoopFigures {
+        LoopFigures {
+            unity_gain_hz: self.unity_gain_hz,
+            phase_margin_deg: self.phase_margin_deg,
+            peak_gain: self.peak_gain,
+            closed_loop_3db_hz: self.closed_loop_3db_hz,
+        }
     }
 
     /// Refuses a loop with closed-loop poles outside the unit circle.
@@ -167,7 +218,7 @@ impl LoopResponse {
             pfd_hz,
             unity_gain_hz: None,
             phase_margin_deg: None,
-            peak: None,
+            peak_gain: None,
             closed_loop_3db_hz: None,
         };
         response.scan();
@@ -251,7 +302,7 @@ impl LoopResponse {
     /// Returns the largest |H| over |H(0)| \[dB\], zero where H only falls.
     #[must_use]
     pub fn peaking_db(&self) -> Option<f64> {
-        self.peak.map(|(_, gain)| crate::base::db_from_power(gain * gain).max(0.0))
+        self.peak_gain.map(|gain| crate::base::db_from_power(gain * gain).max(0.0))
     }
 
     /// Returns the frequency at which |H| has fallen by 3 dB for good \[Hz\]; `None` where it has not by f_pfd/2.
@@ -322,7 +373,7 @@ impl LoopResponse {
             }
             (a * b).sqrt()
         });
-        self.peak = Some((peak_hz, size(peak_hz)));
+        self.peak_gain = Some(size(peak_hz));
         self.closed_loop_3db_hz = edge;
     }
 }

@@ -1,9 +1,11 @@
 //! `channels.csv`: one table of names and accessors is the whole definition of the file.
 
+use std::ops::Deref;
+
 use serde::Serialize;
 
 use super::ReportError;
-use super::figures::figure_text;
+use super::figures::push_figure;
 use super::json::json_text;
 use crate::assess::{ChannelResult, Rule, Tone};
 
@@ -28,7 +30,20 @@ pub struct Column {
     /// Name, with the base unit as suffix; the same as the key in survey.json where both have it.
     pub name: &'static str,
     /// What the cell of a channel holds.
-    pub cell: fn(&ChannelResult) -> Cell,
+    cell: fn(&Facts<'_>) -> Cell,
+}
+
+/// A channel with what several of its cells need.
+struct Facts<'a> {
+    result: &'a ChannelResult,
+    worst: Option<&'a Tone>,
+}
+
+impl Deref for Facts<'_> {
+    type Target = ChannelResult;
+    fn deref(&self) -> &ChannelResult {
+        self.result
+    }
 }
 
 fn figure(value: Option<f64>) -> Cell {
@@ -52,8 +67,8 @@ fn joined<T, I: IntoIterator<Item = T>>(parts: I, show: impl Fn(T) -> String, be
     text(&parts.into_iter().map(show).collect::<Vec<_>>().join(between))
 }
 
-fn worst(channel: &ChannelResult, cell: impl Fn(&Tone) -> Cell) -> Cell {
-    channel.worst_tone().map_or(Cell::Empty, cell)
+fn worst(facts: &Facts<'_>, cell: impl Fn(&Tone) -> Cell) -> Cell {
+    facts.worst.map_or(Cell::Empty, cell)
 }
 
 fn nearest(channel: &ChannelResult, cell: impl Fn(&crate::assess::BoundaryNear) -> Cell) -> Cell {
@@ -154,31 +169,61 @@ pub(crate) fn inert(text: String) -> String {
     }
 }
 
-/// Returns the text of a cell.
-fn cell_text(name: &str, cell: Cell) -> Result<String, ReportError> {
-    Ok(match cell {
-        Cell::Empty => String::new(),
-        Cell::Text(text) => inert(text),
-        Cell::Integer(digits) => digits,
-        Cell::Figure(value) => figure_text(name, value)?,
-        Cell::Flag(flag) => flag.to_string(),
-    })
+/// Appends a cell, quoted where RFC 4180 asks for it.
+fn push_cell(out: &mut String, name: &str, cell: &Cell) -> Result<(), ReportError> {
+    match cell {
+        Cell::Empty => {}
+        Cell::Text(text) => push_field(out, &inert(text.clone())),
+        Cell::Integer(digits) => out.push_str(digits),
+        Cell::Figure(value) => push_figure(out, name, *value)?,
+        Cell::Flag(flag) => out.push_str(if *flag { "true" } else { "false" }),
+    }
+    Ok(())
+}
+
+fn push_field(out: &mut String, text: &str) {
+    if !text.bytes().any(|byte| matches!(byte, b'"' | b',' | b'\r' | b'\n')) {
+        return out.push_str(text);
+    }
+    out.push('"');
+    for (place, part) in text.split('"').enumerate() {
+        if place > 0 {
+            out.push_str("\"\"");
+        }
+        out.push_str(part);
+    }
+    out.push('"');
 }
 
 /// Returns the bytes of `channels.csv`: a header and one row for every channel, in plan order (RFC 4180, UTF-8).
 ///
 /// # Errors
-/// `NotFinite` with the column of a NaN or an infinity; `Csv` where the writer fails.
+/// `NotFinite` with the column of a NaN or an infinity.
 pub fn channels_csv(channels: &[ChannelResult]) -> Result<Vec<u8>, ReportError> {
-    let mut writer = csv::WriterBuilder::new().terminator(csv::Terminator::CRLF).from_writer(Vec::new());
-    writer.write_record(COLUMNS.iter().map(|column| column.name))?;
+    let mut text = csv_header();
+    push_rows(&mut text, channels)?;
+    Ok(text.into_bytes())
+}
+
+/// Returns the first row of `channels.csv`.
+pub(crate) fn csv_header() -> String {
+    let names: Vec<&str> = COLUMNS.iter().map(|column| column.name).collect();
+    format!("{}\r\n", names.join(","))
+}
+
+/// Appends the rows of channels.
+pub(crate) fn push_rows(out: &mut String, channels: &[ChannelResult]) -> Result<(), ReportError> {
     for channel in channels {
-        for column in COLUMNS {
-            writer.write_field(cell_text(column.name, (column.cell)(channel))?)?;
+        let facts = Facts { result: channel, worst: channel.worst_tone() };
+        for (place, column) in COLUMNS.iter().enumerate() {
+            if place > 0 {
+                out.push(',');
+            }
+            push_cell(out, column.name, &(column.cell)(&facts))?;
         }
-        writer.write_record(None::<&[u8]>)?;
+        out.push_str("\r\n");
     }
-    writer.into_inner().map_err(|error| ReportError::Csv(error.into_error().into()))
+    Ok(())
 }
 
 #[cfg(test)]
@@ -187,12 +232,29 @@ mod tests {
 
     #[test]
     fn makes_text_inert_and_leaves_numbers_alone() {
+        let text = |name: &str, cell: Cell| {
+            let mut out = String::new();
+            push_cell(&mut out, name, &cell).unwrap();
+            out
+        };
         for typed in ["=1+1", "+1", "-1", "@SUM(A1)", "\t=1", "＝1"] {
-            assert_eq!(cell_text("group", Cell::Text(typed.to_owned())).unwrap(), format!("'{typed}"));
+            assert_eq!(text("group", Cell::Text(typed.to_owned())), format!("'{typed}"));
         }
-        assert_eq!(cell_text("group", Cell::Text("uplink".into())).unwrap(), "uplink");
-        assert_eq!(cell_text("worst_level_dbc", Cell::Figure(-56.5)).unwrap(), "-56.5");
-        assert_eq!(cell_text("boundary_p", Cell::Integer("-3".into())).unwrap(), "-3");
+        assert_eq!(text("group", Cell::Text("uplink".into())), "uplink");
+        assert_eq!(text("worst_level_dbc", Cell::Figure(-56.5)), "-56.5");
+        assert_eq!(text("boundary_p", Cell::Integer("-3".into())), "-3");
+    }
+
+    #[test]
+    fn fields_are_quoted_as_the_usual_writer_does() {
+        for text in ["", "plain", "a,b", "say \"no\"", "\"", "two\r\nlines", "ü;x", "a\nb,\"c\""] {
+            let mut usual = csv::WriterBuilder::new().terminator(csv::Terminator::CRLF).from_writer(Vec::new());
+            usual.write_record(["x", text]).unwrap();
+            let mut ours = "x,".to_owned();
+            push_field(&mut ours, text);
+            ours.push_str("\r\n");
+            assert_eq!(ours.into_bytes(), usual.into_inner().unwrap());
+        }
     }
 
     #[test]

@@ -1,5 +1,7 @@
 //! Figures as text: the rounding that makes machines agree, and the forms that readers see.
 
+use std::fmt::{self, Write};
+
 use super::ReportError;
 
 /// Keys of frequencies that come from exact arithmetic: every machine finds the same double, so none is rounded.
@@ -24,36 +26,139 @@ pub(crate) const SIGNIFICANT_DIGITS: usize = 10;
 /// Decimals of a figure in decibels.
 pub(crate) const DECIBEL_DECIMALS: usize = 4;
 
-/// Returns a figure as JSON and CSV write it, rounded by the unit that its key names.
+/// Returns what [`push_figure`] appends.
+#[cfg(test)]
+fn figure_text(key: &str, value: f64) -> Result<String, ReportError> {
+    let mut text = String::with_capacity(24);
+    push_figure(&mut text, key, value)?;
+    Ok(text)
+}
+
+/// Appends a figure as JSON and CSV write it, rounded by the unit that its key names.
 ///
 /// Decibels: 4 decimals. Exact frequencies: the nearest double in full. Everything else: 10 significant digits.
 ///
 /// # Errors
 /// `NotFinite` for NaN and infinities.
-pub(crate) fn figure_text(key: &str, value: f64) -> Result<String, ReportError> {
+pub(crate) fn push_figure(out: &mut String, key: &str, value: f64) -> Result<(), ReportError> {
     if !value.is_finite() {
         return Err(ReportError::NotFinite { key: key.to_owned(), found: value });
     }
-    let rounded = if key.ends_with("_db") || key.ends_with("_dbc") || key.ends_with("_dbc_per_hz") {
-        format!("{value:.DECIBEL_DECIMALS$}").parse()
+    if value.abs() < 1e9 && value.fract() == 0.0 {
+        push_whole(out, value);
+    } else if key.ends_with("_db") || key.ends_with("_dbc") || key.ends_with("_dbc_per_hz") {
+        push_decimals(out, value);
     } else if EXACT_KEYS.contains(&key.strip_prefix("boundary_").unwrap_or(key)) {
-        Ok(value)
+        push_shortest(out, value);
     } else {
-        format!("{value:.*e}", SIGNIFICANT_DIGITS - 1).parse()
-    };
-    // A finite number printed by Rust is read back by Rust.
-    Ok(shortest(rounded.unwrap_or(value)))
+        push_digits(out, value);
+    }
+    Ok(())
+}
+
+/// Appends a whole number below 1e15: printing one to many digits is slow, and nothing is to be rounded.
+fn push_whole(out: &mut String, value: f64) {
+    #[allow(clippy::cast_possible_truncation, reason = "a whole number below 1e15")]
+    let whole = value as i64;
+    push(out, format_args!("{whole}"));
+}
+
+fn push(out: &mut String, figure: fmt::Arguments<'_>) {
+    // A string takes whatever is written to it.
+    let _ = out.write_fmt(figure);
+}
+
+/// Text of one figure on the stack.
+struct Short {
+    bytes: [u8; 40],
+    length: usize,
+}
+
+impl Short {
+    /// Returns formatted text; empty where it does not fit.
+    fn new(figure: fmt::Arguments<'_>) -> Self {
+        let mut short = Self { bytes: [0; 40], length: 0 };
+        if short.write_fmt(figure).is_err() {
+            short.length = 0;
+        }
+        short
+    }
+
+    fn text(&self) -> &str {
+        std::str::from_utf8(&self.bytes[..self.length]).unwrap_or("")
+    }
+}
+
+impl Write for Short {
+    fn write_str(&mut self, text: &str) -> fmt::Result {
+        let end = self.length + text.len();
+        self.bytes.get_mut(self.length..end).ok_or(fmt::Error)?.copy_from_slice(text.as_bytes());
+        self.length = end;
+        Ok(())
+    }
+}
+
+/// Appends a figure rounded to [`DECIBEL_DECIMALS`], without trailing zeros.
+fn push_decimals(out: &mut String, value: f64) {
+    if value.abs() >= 1e11 {
+        // Beyond 15 digits the decimals may not be the shortest that read back.
+        let rounded = format!("{value:.DECIBEL_DECIMALS$}").parse().unwrap_or(value);
+        return push_shortest(out, rounded);
+    }
+    let short = Short::new(format_args!("{value:.DECIBEL_DECIMALS$}"));
+    let text = short.text().trim_end_matches('0').trim_end_matches('.');
+    out.push_str(if text == "-0" { "0" } else { text });
+}
+
+/// Appends a figure rounded to [`SIGNIFICANT_DIGITS`], without trailing zeros: fewer than 16 digits are the shortest
+/// decimal that reads back, so they need not be read and printed again.
+fn push_digits(out: &mut String, value: f64) {
+    let short = Short::new(format_args!("{value:.*e}", SIGNIFICANT_DIGITS - 1));
+    let Some((mantissa, exponent)) = short.text().split_once('e') else { return push_shortest(out, value) };
+    let exponent: i32 = exponent.parse().unwrap_or(0);
+    let mantissa = mantissa.trim_end_matches('0').trim_end_matches('.');
+    let (sign, mantissa) = mantissa.strip_prefix('-').map_or(("", mantissa), |rest| ("-", rest));
+    out.push_str(sign);
+    if !(-5..16).contains(&exponent) {
+        return push(out, format_args!("{mantissa}e{exponent}"));
+    }
+    let (first, rest) = mantissa.split_once('.').unwrap_or((mantissa, ""));
+    match usize::try_from(exponent) {
+        Err(_) => {
+            out.push_str("0.");
+            (exponent + 1..0).for_each(|_| out.push('0'));
+            out.push_str(first);
+            out.push_str(rest);
+        }
+        Ok(places) => {
+            out.push_str(first);
+            let (before, after) = rest.split_at(places.min(rest.len()));
+            out.push_str(before);
+            (before.len()..places).for_each(|_| out.push('0'));
+            if !after.is_empty() {
+                out.push('.');
+                out.push_str(after);
+            }
+        }
+    }
+}
+
+/// Appends the shortest decimal that reads back as the same double; zero has no sign.
+fn push_shortest(out: &mut String, value: f64) {
+    if value.abs() < 1e15 && value.fract() == 0.0 {
+        push_whole(out, value);
+    } else if (1e-5..1e16).contains(&value.abs()) {
+        push(out, format_args!("{value}"));
+    } else {
+        push(out, format_args!("{value:e}"));
+    }
 }
 
 /// Returns the shortest decimal that reads back as the same double; zero has no sign.
 fn shortest(value: f64) -> String {
-    if value == 0.0 {
-        "0".to_owned()
-    } else if (1e-5..1e16).contains(&value.abs()) {
-        format!("{value}")
-    } else {
-        format!("{value:e}")
-    }
+    let mut text = String::new();
+    push_shortest(&mut text, value);
+    text
 }
 
 /// Returns a number with a true minus sign, for readers.
@@ -118,6 +223,44 @@ mod tests {
         for (key, value, text) in cases {
             assert_eq!(figure_text(key, value).unwrap(), text, "{key}");
         }
+    }
+
+    /// Asserts that a figure is printed as its rounded value is.
+    fn check_digits(value: f64) {
+        let rounded: f64 = format!("{value:.*e}", SIGNIFICANT_DIGITS - 1).parse().unwrap();
+        assert_eq!(figure_text("anything", value).unwrap(), shortest(rounded));
+        let rounded: f64 = format!("{value:.DECIBEL_DECIMALS$}").parse().unwrap();
+        assert_eq!(figure_text("level_dbc", value).unwrap(), shortest(rounded));
+    }
+
+    #[test]
+    fn digits_are_those_of_the_shortest_decimal() {
+        let mut state = 1u64;
+        let mut checked = 0;
+        for exponent in -40..40 {
+            for _ in 0..200 {
+                state = state.wrapping_mul(6_364_136_223_846_793_005).wrapping_add(1_442_695_040_888_963_407);
+                let share = (state >> 11) as f64 / (1u64 << 53) as f64;
+                check_digits((share - 0.5) * 10f64.powi(exponent));
+                checked += 1;
+            }
+        }
+        for value in [
+            0.0,
+            -0.0,
+            1.0,
+            -10.0,
+            1.5,
+            1e9 + 0.5,
+            12_345_678_901.0,
+            9.999_999_999_9e14,
+            1e-5,
+            9.999_999_999_9e-6,
+            123.0,
+        ] {
+            check_digits(value);
+        }
+        assert_eq!(checked, 16_000);
     }
 
     #[test]

@@ -6,7 +6,7 @@
 use serde::ser::{self, Serialize, Serializer};
 
 use super::ReportError;
-use super::figures::figure_text;
+use super::figures::push_figure;
 
 /// The struct name under which `serde_json` hands over a number of any length.
 const BIG_NUMBER: &str = "$serde_json::private::Number";
@@ -42,17 +42,21 @@ struct Writer {
 impl Writer {
     fn string(&mut self, text: &str) {
         self.out.push('"');
-        for c in text.chars() {
-            match c {
-                '"' => self.out.push_str("\\\""),
-                '\\' => self.out.push_str("\\\\"),
-                '\n' => self.out.push_str("\\n"),
-                '\r' => self.out.push_str("\\r"),
-                '\t' => self.out.push_str("\\t"),
-                c if c < ' ' => self.out.push_str(&format!("\\u{:04x}", u32::from(c))),
-                c => self.out.push(c),
+        let mut rest = text;
+        // Stretches without anything to escape are copied whole; what is escaped is one byte each.
+        while let Some(at) = rest.bytes().position(|byte| byte < b' ' || byte == b'"' || byte == b'\\') {
+            self.out.push_str(&rest[..at]);
+            match rest.as_bytes()[at] {
+                b'"' => self.out.push_str("\\\""),
+                b'\\' => self.out.push_str("\\\\"),
+                b'\n' => self.out.push_str("\\n"),
+                b'\r' => self.out.push_str("\\r"),
+                b'\t' => self.out.push_str("\\t"),
+                byte => self.out.push_str(&format!("\\u{byte:04x}")),
             }
+            rest = &rest[at + 1..];
         }
+        self.out.push_str(rest);
         self.out.push('"');
     }
 
@@ -135,9 +139,7 @@ impl<'a> Serializer for &'a mut Writer {
     }
 
     fn serialize_f64(self, value: f64) -> Result<(), ReportError> {
-        let text = figure_text(&self.key, value)?;
-        self.out.push_str(&text);
-        Ok(())
+        push_figure(&mut self.out, &self.key, value)
     }
 
     fn serialize_char(self, value: char) -> Result<(), ReportError> {

@@ -28,6 +28,7 @@ mod sequence;
 mod sequence_files;
 mod simulation;
 mod single_file;
+mod stream;
 mod survey_json;
 mod svg_backend;
 mod write;
@@ -46,15 +47,16 @@ pub use measurement::{MEASURED_COLUMNS, measure_files, measure_json, measure_tex
 pub use pdf::pdf;
 pub use positions::{hunt_json, hunt_text, intervals_json, intervals_text};
 pub use remedy::{remedy_files, remedy_json, remedy_text};
-pub use render::{render, render_with};
+pub use render::{assemble, document_files, render, render_with};
 pub use sequence::{OffsetScale, capture_json, capture_text, seeds_text, sequence_json, sequence_plot, sequence_text};
 pub use sequence_files::{CaptureError, SequenceForm, read_capture, sequence_bytes};
 pub use simulation::{
     settling_files, settling_json, settling_text, simulation_files, simulation_json, simulation_text,
 };
 pub use single_file::{read_file, write_file};
+pub use stream::{ChannelRows, StreamedSet};
 pub use survey_json::survey_json;
-pub use write::{add_files, check_target, write_set};
+pub use write::{StagedFile, StagedSet, add_files, check_target, write_set};
 
 use serde::Serialize;
 
@@ -103,17 +105,19 @@ pub struct ReportSet {
 }
 
 impl ReportSet {
-    /// Adds a file, and its name to the marker: a later set removes it with the others.
-    pub fn add(&mut self, file: ReportFile) {
-        if let Some(marker) = self.files.iter_mut().find(|other| other.path == MARKER) {
-            marker.bytes.extend_from_slice(format!("{}\n", file.path).as_bytes());
-        }
-        self.files.push(file);
-    }
-
     /// Returns the content of a file of the set, or `None` when the set has no such file.
     #[must_use]
     pub fn get(&self, path: &str) -> Option<&[u8]> {
         self.files.iter().find(|file| file.path == path).map(|file| file.bytes.as_slice())
     }
+}
+
+/// Returns the files in order, with the marker that names them and the files written elsewhere.
+fn with_marker(mut files: Vec<ReportFile>, elsewhere: &[&str]) -> Vec<ReportFile> {
+    files.sort_by(|a, b| a.path.cmp(&b.path));
+    let mut names: Vec<&str> = files.iter().map(|file| file.path.as_str()).chain(elsewhere.iter().copied()).collect();
+    names.sort_unstable();
+    let marker = format!("{MARKER_HEAD}\n{}\n", names.join("\n"));
+    files.push(ReportFile { path: MARKER.into(), bytes: marker.into_bytes() });
+    files
 }

@@ -3,9 +3,7 @@
 use super::document::document;
 use super::page::page;
 use super::plots::plots;
-use super::{
-    MARKER, MARKER_HEAD, RenderOptions, ReportError, ReportFile, ReportSet, channels_csv, markdown, png, survey_json,
-};
+use super::{RenderOptions, ReportError, ReportFile, ReportSet, channels_csv, markdown, png, survey_json, with_marker};
 use crate::decide::dossier::Dossier;
 use crate::survey::SurveyResult;
 
@@ -30,13 +28,21 @@ pub fn render_with(
     dossier: &Dossier,
     options: &RenderOptions,
 ) -> Result<ReportSet, ReportError> {
+    assemble(result, document_files(result, dossier, options)?, options)
+}
+
+/// Returns the page and its pictures, in every form that is asked for.
+///
+/// # Errors
+/// As [`render_with`].
+pub fn document_files(
+    result: &SurveyResult,
+    dossier: &Dossier,
+    options: &RenderOptions,
+) -> Result<Vec<ReportFile>, ReportError> {
     let plots = plots(result, dossier)?;
     let doc = document(result, dossier, options, &plots);
-    let mut files = vec![
-        ReportFile { path: "survey.json".into(), bytes: survey_json(result, options)?.into_bytes() },
-        ReportFile { path: "channels.csv".into(), bytes: channels_csv(&result.channels)? },
-        ReportFile { path: "report.html".into(), bytes: page(&doc)?.into_bytes() },
-    ];
+    let mut files = vec![ReportFile { path: "report.html".into(), bytes: page(&doc)?.into_bytes() }];
     if options.markdown {
         files.push(ReportFile { path: "report.md".into(), bytes: markdown::markdown(&doc)?.into_bytes() });
     }
@@ -46,12 +52,19 @@ pub fn render_with(
             files.push(ReportFile { path: format!("plots/{}.png", plot.name), bytes: png::png(plot)? });
         }
     }
-    files.sort_by(|a, b| a.path.cmp(&b.path));
-    let mut marker = format!("{MARKER_HEAD}\n");
-    for file in &files {
-        marker.push_str(&file.path);
-        marker.push('\n');
-    }
-    files.push(ReportFile { path: MARKER.into(), bytes: marker.into_bytes() });
-    Ok(ReportSet { files })
+    Ok(files)
+}
+
+/// Returns the set of files that were made for a survey, with its data files and the marker.
+///
+/// # Errors
+/// As [`render_with`].
+pub fn assemble(
+    result: &SurveyResult,
+    mut files: Vec<ReportFile>,
+    options: &RenderOptions,
+) -> Result<ReportSet, ReportError> {
+    files.push(ReportFile { path: "survey.json".into(), bytes: survey_json(result, options)?.into_bytes() });
+    files.push(ReportFile { path: "channels.csv".into(), bytes: channels_csv(&result.channels)? });
+    Ok(ReportSet { files: with_marker(files, &[]) })
 }

@@ -34,7 +34,34 @@ impl Serialize for Pairs<'_> {
 /// # Errors
 /// `NotFinite` with the key of a NaN or an infinity; `Serialize` for what JSON cannot express.
 pub fn survey_json(result: &SurveyResult, options: &RenderOptions) -> Result<String, ReportError> {
+    let rows = channel_rows_json(&result.channels, options.detail)?;
     let omitted = result.channels.iter().filter(|channel| !listed(channel, options.detail)).count();
+    let (mut out, tail) = survey_json_around(result, options, (rows.is_empty(), omitted as u64))?;
+    out.push_str(rows.strip_suffix(ROW_END).unwrap_or(&rows));
+    out.push_str(&tail);
+    Ok(out)
+}
+
+/// What ends the row of a channel that is not the last.
+pub(crate) const ROW_END: &str = ",\n";
+
+/// Returns the rows of the channels that `detail` lists, each with [`ROW_END`].
+pub(crate) fn channel_rows_json(channels: &[ChannelResult], detail: Detail) -> Result<String, ReportError> {
+    let mut rows = String::new();
+    for channel in channels.iter().filter(|channel| listed(channel, detail)) {
+        rows.push_str(&json_text("channels", channel)?);
+        rows.push_str(ROW_END);
+    }
+    Ok(rows)
+}
+
+/// Returns what stands before and after the rows of the channels: whether there are none, and how many channels are not
+/// listed.
+pub(crate) fn survey_json_around(
+    result: &SurveyResult,
+    options: &RenderOptions,
+    (is_empty, omitted): (bool, u64),
+) -> Result<(String, String), ReportError> {
     let mut out = String::from("{\n");
     let mut line = |key: &str, text: String| {
         out.push_str(&format!("\"{key}\": {text},\n"));
@@ -50,13 +77,9 @@ pub fn survey_json(result: &SurveyResult, options: &RenderOptions) -> Result<Str
     line("loop", json_text("loop", &result.loop_summary)?);
     line("summary", json_text("summary", &complete_summary(result))?);
     line("method_check", json_text("method_check", &result.method_check)?);
-    let mut rows = Vec::new();
-    for channel in result.channels.iter().filter(|channel| listed(channel, options.detail)) {
-        rows.push(json_text("channels", channel)?);
-    }
-    line("channels", if rows.is_empty() { "[]".to_owned() } else { format!("[\n{}\n]", rows.join(",\n")) });
-    out.push_str(&format!("\"warnings\": {}\n}}\n", json_text("warnings", &result.warnings)?));
-    Ok(out)
+    out.push_str(if is_empty { "\"channels\": [" } else { "\"channels\": [\n" });
+    let end = if is_empty { "]" } else { "\n]" };
+    Ok((out, format!("{end},\n\"warnings\": {}\n}}\n", json_text("warnings", &result.warnings)?)))
 }
 
 /// Returns the summary with an entry for every rule, so that a rule that never fired reads 0 and is not missing.

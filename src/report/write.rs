@@ -1,7 +1,7 @@
 //! The one file writer: a whole new set beside the old one, then one swap.
 
 use std::fs;
-use std::io;
+use std::io::{self, Read, Write};
 use std::path::{Component, Path, PathBuf};
 
 use super::{MARKER, MARKER_HEAD, ReportError, ReportFile, ReportSet};
@@ -18,34 +18,112 @@ const OLD_KEPT: &str = "what was there before is untouched";
 /// `NotOurs` for a folder that holds other things, `NotAFolder` for a file, `Io` where the system refuses; after any
 /// of them the old set is whole.
 pub fn write_set(out_dir: &Path, set: &ReportSet) -> Result<(), ReportError> {
-    let target = resolved(out_dir)?;
-    let old_files = old_set(&target)?;
-    let parent = target.parent().unwrap_or(Path::new("/"));
-    fs::create_dir_all(parent).map_err(|source| refused(parent, "created", source))?;
-    let fresh = sibling(parent, ".thornmap-new-")?;
-    for file in &set.files {
-        let path = file.path.split('/').fold(fresh.path().to_owned(), |path, part| path.join(part));
-        let folder = path.parent().unwrap_or(fresh.path());
+    StagedSet::new(out_dir)?.finish(set)
+}
+
+/// A report set that grows in a sibling folder: large files are written as they come, the rest at the end.
+///
+/// Dropped before [`StagedSet::finish`] it leaves nothing behind.
+#[derive(Debug)]
+pub struct StagedSet {
+    target: PathBuf,
+    old_files: Vec<PathBuf>,
+    fresh: tempfile::TempDir,
+}
+
+impl StagedSet {
+    /// Opens the sibling folder of `out_dir`.
+    ///
+    /// # Errors
+    /// As [`write_set`].
+    pub fn new(out_dir: &Path) -> Result<Self, ReportError> {
+        let target = resolved(out_dir)?;
+        let old_files = old_set(&target)?;
+        let parent = target.parent().unwrap_or(Path::new("/"));
+        fs::create_dir_all(parent).map_err(|source| refused(parent, "created", source))?;
+        let fresh = sibling(parent, ".thornmap-new-")?;
+        Ok(Self { target, old_files, fresh })
+    }
+
+    /// Returns a new file of the set; `path` has `/` between its parts.
+    ///
+    /// # Errors
+    /// `Io` where the system refuses.
+    pub fn create(&self, path: &str) -> Result<StagedFile, ReportError> {
+        let path = self.place(path)?;
+        let file = fs::File::create(&path).map_err(|source| refused(&path, "written", source))?;
+        Ok(StagedFile { path, file })
+    }
+
+    /// Returns the place of a file in the sibling folder, with its folder made.
+    fn place(&self, path: &str) -> Result<PathBuf, ReportError> {
+        let path = path.split('/').fold(self.fresh.path().to_owned(), |path, part| path.join(part));
+        let folder = path.parent().unwrap_or(self.fresh.path());
         fs::create_dir_all(folder).map_err(|source| refused(folder, "created", source))?;
-        fs::write(&path, &file.bytes).map_err(|source| refused(&path, "written", source))?;
+        Ok(path)
     }
-    make_readable(fresh.path())?;
-    if !target.exists() {
-        return move_in(fresh, &target);
+
+    /// Writes the other files of the set and puts the whole in place of the old one.
+    ///
+    /// # Errors
+    /// As [`write_set`].
+    pub fn finish(self, set: &ReportSet) -> Result<(), ReportError> {
+        for file in &set.files {
+            let path = self.place(&file.path)?;
+            fs::write(&path, &file.bytes).map_err(|source| refused(&path, "written", source))?;
+        }
+        let Self { target, old_files, fresh } = self;
+        make_readable(fresh.path())?;
+        if !target.exists() {
+            return move_in(fresh, &target);
+        }
+        let parent = target.parent().unwrap_or(Path::new("/"));
+        let aside = sibling(parent, ".thornmap-old-")?;
+        let old = aside.path().join("set");
+        fs::rename(&target, &old).map_err(|source| refused(&target, "moved aside", source))?;
+        if let Err(error) = move_in(fresh, &target) {
+            return match fs::rename(&old, &target) {
+                Ok(()) => Err(error),
+                Err(source) => {
+                    let path = aside.keep();
+                    Err(ReportError::Io { path, action: "moved back", kept: "the old set is there, in full", source })
+                }
+            };
+        }
+        carry_over(aside, &old, &target, &old_files)
     }
-    let aside = sibling(parent, ".thornmap-old-")?;
-    let old = aside.path().join("set");
-    fs::rename(&target, &old).map_err(|source| refused(&target, "moved aside", source))?;
-    if let Err(error) = move_in(fresh, &target) {
-        return match fs::rename(&old, &target) {
-            Ok(()) => Err(error),
-            Err(source) => {
-                let path = aside.keep();
-                Err(ReportError::Io { path, action: "moved back", kept: "the old set is there, in full", source })
-            }
-        };
+}
+
+/// A file of a staged set that is being written.
+#[derive(Debug)]
+pub struct StagedFile {
+    path: PathBuf,
+    file: fs::File,
+}
+
+impl StagedFile {
+    /// Writes bytes after those already there.
+    ///
+    /// # Errors
+    /// `Io` where the system refuses.
+    pub fn write(&mut self, bytes: &[u8]) -> Result<(), ReportError> {
+        self.file.write_all(bytes).map_err(|source| refused(&self.path, "written", source))
     }
-    carry_over(aside, &old, &target, &old_files)
+
+    /// Writes what stands in another file of the set, less its last `less` bytes, and removes that file.
+    ///
+    /// # Errors
+    /// `Io` where the system refuses.
+    pub fn take_over(&mut self, other: StagedFile, less: u64) -> Result<(), ReportError> {
+        let StagedFile { path, file } = other;
+        drop(file);
+        let copied = fs::File::open(&path).and_then(|source| {
+            let length = source.metadata()?.len().saturating_sub(less);
+            io::copy(&mut source.take(length), &mut self.file)
+        });
+        copied.map_err(|source| refused(&self.path, "written", source))?;
+        fs::remove_file(&path).map_err(|source| refused(&path, "removed", source))
+    }
 }
 
 /// Checks, before the long work, that a set can be written as `out_dir`: absent, empty, or an earlier set, in a folder

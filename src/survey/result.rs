@@ -62,6 +62,12 @@ pub struct MethodCheck {
     pub channels: u64,
     /// Largest difference of a compared line; `None` when none was compared.
     pub worst_difference_db: Option<f64>,
+    /// Channels computed both from the plan's tables and without them.
+    pub table_channels: u64,
+    /// Largest difference of a tone's level between the two \[dB\]; `None` when none was compared.
+    pub table_level_difference_db: Option<f64>,
+    /// Largest difference of the noise between the two \[dB\]; `None` when none was compared.
+    pub table_noise_difference_db: Option<f64>,
 }
 
 /// Everything a survey found.

@@ -19,6 +19,10 @@ use crate::base::{Exact, ExactError, Frequency};
 #[must_use]
 pub fn signed_residue(value: i128, modulus: i128) -> i128 {
     assert!(modulus > 0, "the modulus of a residue is positive");
+    if let (Ok(value), Ok(modulus)) = (i64::try_from(value), i64::try_from(modulus)) {
+        let residue = value.rem_euclid(modulus);
+        return i128::from(if residue > modulus - residue { residue - modulus } else { residue });
+    }
     let residue = value.rem_euclid(modulus);
     // `residue − (modulus − residue)` instead of doubling: no overflow near 2^127.
     if residue > modulus - residue { residue - modulus } else { residue }
@@ -67,6 +71,43 @@ impl NearFraction {
 /// assert_eq!((near.p, near.tone_offset()), (27, Frequency::from_whole_hz(10_000)));
 /// ```
 pub fn nearest_fraction(frequency: Frequency, base: Frequency, q: u64) -> Result<NearFraction, ExactError> {
+    if let Some(near) = nearest_by_integers(frequency.hz(), base.hz(), q) {
+        return near;
+    }
+    nearest_by_rationals(frequency, base, q)
+}
+
+/// The search in integers with one reduction at its end; `None` where a product passes 127 bits or the base is not
+/// positive.
+fn nearest_by_integers(frequency: Exact, base: Exact, q: u64) -> Option<Result<NearFraction, ExactError>> {
+    if base.sign() <= 0 {
+        return None;
+    }
+    // q·(a/b) over c/d is q·a·d/(b·c).
+    let top = frequency.numerator().checked_mul(i128::from(q))?.checked_mul(base.denominator())?;
+    let bottom = frequency.denominator().checked_mul(base.numerator())?;
+    let whole = frequency.denominator().checked_mul(base.denominator())?;
+    let floor = match (i64::try_from(top), i64::try_from(bottom)) {
+        (Ok(top), Ok(bottom)) => i128::from(top.div_euclid(bottom)),
+        _ => top.div_euclid(bottom),
+    };
+    let rest = top - floor * bottom;
+    let (p, rest) = if rest > bottom - rest { (floor + 1, rest - bottom) } else { (floor, rest) };
+    let lowest_terms = match i64::try_from(p) {
+        Ok(p) => p.unsigned_abs().gcd(&q) == 1,
+        Err(_) => p.gcd(&i128::from(q)) == 1,
+    };
+    // The rest over b·c, times c/d.
+    Some(Exact::new(rest, whole).map(|signed| NearFraction {
+        p,
+        q,
+        signed_offset: Frequency::from_hz(signed),
+        lowest_terms,
+    }))
+}
+
+/// The search in rationals: the slow definition.
+fn nearest_by_rationals(frequency: Frequency, base: Frequency, q: u64) -> Result<NearFraction, ExactError> {
     let cycles = frequency.hz().times(&Exact::from_integer(i128::from(q)))?.over(&base.hz())?;
     let floor = cycles.floor();
     let fraction = cycles.minus(&Exact::from_integer(floor))?;
@@ -101,6 +142,31 @@ mod tests {
         for (frequency, base, q, want) in cases {
             assert_eq!(nearest_fraction(frequency, base, q).unwrap().tone_offset(), want);
         }
+    }
+
+    #[test]
+    fn integers_and_rationals_find_the_same_fraction() {
+        let mut state = 3u64;
+        let mut next = || {
+            state = state.wrapping_mul(6_364_136_223_846_793_005).wrapping_add(1_442_695_040_888_963_407);
+            i128::from(state >> 30)
+        };
+        let mut checked = 0;
+        for round in 0..20_000u64 {
+            let sign = if round % 5 == 0 { -1 } else { 1 };
+            let frequency = Exact::new(sign * (next() + 1), next() % (1 << (round % 30)) + 1).unwrap();
+            let base = Exact::new(next() % 40_000_000 + 1, next() % 9 + 1).unwrap();
+            let q = round % 7 + 1;
+            let found = nearest_by_integers(frequency, base, q).unwrap().unwrap();
+            let slow = nearest_by_rationals(Frequency::from_hz(frequency), Frequency::from_hz(base), q).unwrap();
+            assert_eq!(found, slow);
+            checked += 1;
+        }
+        // A tie takes the lower p on both routes.
+        let (half, one) = (Exact::new(5, 2).unwrap(), Exact::ONE);
+        assert_eq!(nearest_by_integers(half, one, 1).unwrap().unwrap().p, 2);
+        assert_eq!(nearest_by_rationals(Frequency::from_hz(half), Frequency::from_hz(one), 1).unwrap().p, 2);
+        assert_eq!(checked, 20_000);
     }
 
     #[test]

@@ -1,5 +1,7 @@
 //! Tones of other clocks on the board: positions by path, once per exact offset.
 
+use std::ops::RangeInclusive;
+
 use crate::base::{Exact, ExactError, Frequency};
 
 use super::boundary::nearest_fraction;
@@ -63,7 +65,7 @@ pub fn clock_tones(clock: Frequency, carriers: &Carriers, span: Frequency) -> Re
         if path == ClockPath::Output && carriers.output == carriers.vco {
             continue;
         }
-        for harmonic in 1..=MOST_HARMONICS {
+        for harmonic in harmonics_in_span(clock, carriers, path, span)? {
             let multiple = clock.hz().times(&Exact::from_integer(i128::from(harmonic)))?;
             let offset = match path {
                 ClockPath::Vco => Frequency::from_hz(multiple.minus(&carriers.vco.hz())?.abs()),
@@ -77,6 +79,28 @@ pub fn clock_tones(clock: Frequency, carriers: &Carriers, span: Frequency) -> Re
         }
     }
     Ok(tones)
+}
+
+/// Returns the harmonics that can lie within the span: of a beat with one carrier only those next to it.
+fn harmonics_in_span(
+    clock: Frequency,
+    carriers: &Carriers,
+    path: ClockPath,
+    span: Frequency,
+) -> Result<RangeInclusive<u64>, ExactError> {
+    let carrier = match path {
+        ClockPath::Vco => carriers.vco,
+        ClockPath::Output => carriers.output,
+        ClockPath::Detector => return Ok(1..=MOST_HARMONICS),
+    };
+    if clock.hz().sign() <= 0 {
+        return Ok(1..=MOST_HARMONICS);
+    }
+    // One more than the floor of the lower end may be the first; the floor itself costs nothing.
+    let first = carrier.hz().minus(&span.hz())?.over(&clock.hz())?.floor();
+    let last = carrier.hz().plus(&span.hz())?.over(&clock.hz())?.floor();
+    let bounded = |harmonic: i128| u64::try_from(harmonic.clamp(0, 1 + i128::from(MOST_HARMONICS))).unwrap_or(0);
+    Ok(bounded(first).max(1)..=bounded(last).min(MOST_HARMONICS))
 }
 
 #[cfg(test)]
@@ -94,5 +118,30 @@ mod tests {
             found,
             [(ClockPath::Output, 10, mhz(1)), (ClockPath::Detector, 1, mhz(8)), (ClockPath::Detector, 2, mhz(4)),]
         );
+    }
+
+    #[test]
+    fn no_harmonic_within_the_span_is_passed_over() {
+        let khz = |value: i128| Frequency::from_whole_hz(value * 1_000);
+        let mut found = 0;
+        for step in 0..400i128 {
+            let carriers =
+                Carriers { vco: khz(160_000 + 1_237 * step), output: khz(40_000 + 311 * step), pfd: khz(19_200) };
+            let (clock, span) = (khz(9_600 + 250 * (step % 9)), khz(400 + 100 * (step % 7)));
+            let tones = clock_tones(clock, &carriers, span).unwrap();
+            for (path, carrier) in [(ClockPath::Vco, carriers.vco), (ClockPath::Output, carriers.output)] {
+                let near: Vec<u64> = (1..=20u64)
+                    .filter(|m| {
+                        let multiple = clock.hz().times(&Exact::from_integer(i128::from(*m))).unwrap();
+                        let offset = multiple.minus(&carrier.hz()).unwrap().abs();
+                        offset.sign() > 0 && Frequency::from_hz(offset) <= span
+                    })
+                    .collect();
+                let listed: Vec<u64> = tones.iter().filter(|t| t.path == path).map(|t| t.harmonic).collect();
+                assert_eq!(listed, near, "step {step}");
+                found += near.len();
+            }
+        }
+        assert!(found > 50, "{found}");
     }
 }

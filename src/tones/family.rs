@@ -46,10 +46,19 @@ pub fn modulator_family(n: u64, k: u64, m: u64, largest_q: u64, harmonics: u64) 
     let (n, k, m) = (i128::from(n), i128::from(k), i128::from(m));
     let fraction_of = |h: u64| {
         let residue = signed_residue(i128::from(h) * k, m);
-        let p = i128::from(h) * n + (i128::from(h) * k - residue) / m;
+        let turned = i128::from(h) * k - residue;
+        // In 64 bits where they hold it: a division of 128 bits costs ten times as much.
+        let turns = match (i64::try_from(turned), i64::try_from(m)) {
+            (Ok(turned), Ok(m)) => i128::from(turned / m),
+            _ => turned / m,
+        };
+        let p = i128::from(h) * n + turns;
         (residue, p)
     };
-    let is_boundary = |q: u64, p: i128| p.gcd(&i128::from(q)) == 1;
+    let is_boundary = |q: u64, p: i128| match u64::try_from(p.unsigned_abs()) {
+        Ok(p) => p.gcd(&q) == 1,
+        Err(_) => p.gcd(&i128::from(q)) == 1,
+    };
     let mut tones: Vec<FamilyTone> = Vec::new();
     for harmonic in 1..=largest_q.max(harmonics) {
         let (residue, p) = fraction_of(harmonic);

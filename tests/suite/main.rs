@@ -20,6 +20,7 @@ mod reports;
 mod sequences;
 mod simulations;
 mod spectra;
+mod streams;
 mod surveys;
 mod tree;
 mod tuned;

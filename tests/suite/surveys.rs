@@ -213,3 +213,25 @@ fn noise_carried_beyond_its_points_is_listed_and_unused_figures_are_said() {
     assert!(setup.warnings().iter().any(|text| text.contains("detector.pump_noise is not added")));
     assert!(setup.warnings().iter().any(|text| text.contains("detector.reset_delay enters no prediction")));
 }
+
+/// Words at and near simple fractions drift slowly: a record of 2^17 cycles shows their lines up to 14 dB off, the whole
+/// period does not.
+#[test]
+fn lines_of_drifting_words_agree_with_their_whole_period() {
+    let fractions = [(63, 64), (1, 64), (31, 32), (9, 128), (85, 128), (7, 96), (23, 384), (1, 384)];
+    let list: Vec<String> =
+        fractions.iter().map(|(k, m)| format!("\"{}/{m} Hz\"", (87 * m + k) * 4_800_000i64)).collect();
+    let text = std::fs::read_to_string(concat!(env!("CARGO_MANIFEST_DIR"), "/configs/demo.toml")).unwrap();
+    let head = &text[..text.find("[[channels]]").unwrap()];
+    let source = format!("{head}[[channels]]\nlist = [{}]\noutput = [4]\n", list.join(", "));
+    let plan = parse_plan(&source, "drift", &|_| Err("none".to_owned())).unwrap();
+    let setup = Setup::new(&plan).unwrap();
+    let mut checked = 0;
+    for index in 0..plan.groups[0].channels.len() {
+        let channel = setup.assess_index(0, index, &mut setup.scratch()).unwrap();
+        let Some(check) = setup.check_line(&channel).unwrap() else { continue };
+        assert!(check.difference_db <= check.uncertainty_db + 0.02, "{}: {check:?}", channel.channel);
+        checked += 1;
+    }
+    assert!(checked >= 6, "{checked}");
+}

@@ -6,7 +6,7 @@ use serde::{Serialize, Serializer};
 use crate::assess::{AssessError, ChannelResult, Setup};
 use crate::modulator::Structure;
 use crate::plan::{ChannelGroup, ChannelList, Plan};
-use crate::survey::survey;
+use crate::survey::{assess_all, summarise};
 
 /// Which channels an option was tried on.
 #[derive(Debug, Clone, PartialEq, Eq, Serialize)]
@@ -96,9 +96,10 @@ fn big<S: Serializer>(value: &Option<BigUint>, serializer: S) -> Result<S::Ok, S
 
 /// Surveys a candidate plan and draws its figures together.
 pub(super) fn measure(plan: &Plan) -> Result<Figures, AssessError> {
-    let result = survey(plan, &|_| {})?;
+    let channels = assess_all(plan)?;
+    let summary = summarise(&channels);
     let setup = Setup::new(plan)?;
-    let legal: Vec<&ChannelResult> = result.channels.iter().filter(|channel| channel.legal).collect();
+    let legal: Vec<&ChannelResult> = channels.iter().filter(|channel| channel.legal).collect();
     let largest = |values: Vec<Option<f64>>| {
         values.into_iter().collect::<Option<Vec<f64>>>().and_then(|values| values.into_iter().reduce(f64::max))
     };
@@ -116,9 +117,9 @@ pub(super) fn measure(plan: &Plan) -> Result<Figures, AssessError> {
     let shares = running.iter().map(|channel| setup.modulator_share(channel)).collect::<Result<Vec<_>, _>>()?;
     let is_integer = plan.modulator.settings.structure == Structure::Integer;
     Ok(Figures {
-        bad: result.summary.bad,
-        marginal: result.summary.marginal,
-        clear: result.summary.clear,
+        bad: summary.bad,
+        marginal: summary.marginal,
+        clear: summary.clear,
         worst_margin_db: legal
             .iter()
             .flat_map(|channel| &channel.tones)
@@ -143,7 +144,7 @@ pub(super) fn measure(plan: &Plan) -> Result<Figures, AssessError> {
             Some(i128::from(plan.divider.minimum) - i128::from(range.0)),
             plan.divider.maximum.map(|maximum| i128::from(maximum) - i128::from(range.1)),
         ),
-        illegal: result.summary.illegal,
+        illegal: summary.illegal,
         worst_error_hz: legal.iter().filter_map(|channel| channel.error_hz).map(f64::abs).fold(0.0, f64::max),
         dither_can_whiten: whitening(plan),
     })

@@ -201,17 +201,18 @@ fn rests_on(given: usize, assumed: &[&Assumption]) -> String {
 
 fn rows_note(result: &SurveyResult, detail: Detail, shown: usize) -> String {
     let number = |value: usize| count(value as u64);
-    let matching = result.channels.iter().filter(|channel| listed(channel, detail)).count();
-    let kind = match detail {
-        Detail::All => "channels",
-        Detail::Flagged => "bad and marginal channels",
+    // A large plan's result holds a part of its channels; the counts hold all.
+    let summary = &result.summary;
+    let (matching, kind) = match detail {
+        Detail::All => (summary.channels, "channels"),
+        Detail::Flagged => (summary.bad + summary.marginal, "bad and marginal channels"),
     };
-    if shown < matching {
+    if (shown as u64) < matching {
         format!(
             "The worst {} of {} {kind}; channels.csv holds all {}.",
             number(shown),
-            number(matching),
-            number(result.channels.len())
+            count(matching),
+            count(summary.channels)
         )
     } else {
         format!("All {} {kind}.", number(shown))

@@ -91,11 +91,13 @@ fn percent(number: u64, total: u64) -> String {
     }
 }
 
-/// Returns how many channels carry doubts of their own.
+/// Returns how many channels carry doubts of their own; nothing where the result does not hold every channel (their
+/// doubts stand among those of the plan, with counts).
 pub(super) fn doubtful(result: &SurveyResult) -> Option<String> {
     let number = result.channels.iter().filter(|channel| !channel.warnings.is_empty()).count();
     let carry = if number == 1 { "channel carries a doubt of its own" } else { "channels carry doubts of their own" };
-    (number > 0).then(|| format!("{} {carry}: see “warnings” in channels.csv.", count(number as u64)))
+    let is_whole = result.channels.len() as u64 == result.summary.channels;
+    (number > 0 && is_whole).then(|| format!("{} {carry}: see “warnings” in channels.csv.", count(number as u64)))
 }
 
 #[cfg(test)]

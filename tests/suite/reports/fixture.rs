@@ -483,7 +483,7 @@ pub fn survey(count: u64) -> SurveyResult {
             phase_margin_deg: Some(Range3 { minimum: 49.7, design: 50.0, maximum: 50.0 }),
         },
         summary: summary(&channels),
-        method_check: MethodCheck { channels: 8, worst_difference_db: Some(0.012_345_6) },
+        method_check: MethodCheck { channels: 8, worst_difference_db: Some(0.012_345_6), ..MethodCheck::default() },
         spectrum: Some(spectrum(worst)),
         warnings: vec!["leakage is unknown: the level of every reference tone is unknown".into()],
         plan,
