@@ -11,6 +11,7 @@ mod fft;
 mod ideal;
 mod local_noise;
 pub mod oracle;
+mod record;
 mod sideband;
 mod window;
 
@@ -19,6 +20,7 @@ pub use density::{Density, DensitySettings};
 pub use fft::{FftScratch, FftStage};
 pub use ideal::{ideal_density, ideal_phase_rms_rad};
 pub use local_noise::{Neighbourhood, local_line_power};
+pub use record::{RecordSpectrum, RecordWindow};
 pub use sideband::{divided_dbc, sideband_dbc};
 pub use window::Window;
 

@@ -27,7 +27,7 @@ const BLOCK: usize = 64;
 
 impl Window {
     /// Returns the alternating cosine coefficients `a_0 − a_1·cos + a_2·cos 2 − …`.
-    const fn coefficients(self) -> &'static [f64] {
+    pub(super) const fn coefficients(self) -> &'static [f64] {
         match self {
             Self::Rectangular => &[1.0],
             Self::Hann => &[0.5, 0.5],
