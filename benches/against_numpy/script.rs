@@ -12,7 +12,7 @@ use crate::survey::Job;
 /// A Python process that answers one line for each command.
 pub struct Script {
     process: Child,
-    input: ChildStdin,
+    input: Option<ChildStdin>,
     output: BufReader<ChildStdout>,
     /// Versions of numpy and scipy.
     pub versions: String,
@@ -35,7 +35,7 @@ impl Script {
             Command::new(&python).arg(path).stdin(Stdio::piped()).stdout(Stdio::piped()).spawn().map_err(|error| {
                 format!("{python} does not start ({error}); install Python 3, or name one in THORNMAP_PYTHON")
             })?;
-        let input = process.stdin.take().expect("standard input is piped");
+        let input = process.stdin.take();
         let output = BufReader::new(process.stdout.take().expect("standard output is piped"));
         let mut script = Self { process, input, output, versions: String::new() };
         let missing = || {
@@ -51,8 +51,9 @@ impl Script {
     }
 
     fn send(&mut self, line: &str) -> std::io::Result<()> {
-        writeln!(self.input, "{line}")?;
-        self.input.flush()
+        let input = self.input.as_mut().expect("standard input is piped and open");
+        writeln!(input, "{line}")?;
+        input.flush()
     }
 
     fn receive(&mut self) -> String {
@@ -86,8 +87,8 @@ impl Script {
 
 impl Drop for Script {
     fn drop(&mut self) {
-        // The pool's workers end with their parent, which sees the end of its input only once this side is closed.
-        let _ = self.process.kill();
+        // The script and its pool end with their input.
+        drop(self.input.take());
         let _ = self.process.wait();
     }
 }
