@@ -1,4 +1,4 @@
-//! The exact survey path against a vectorised numpy and scipy script that does the same work, on the same cores:
+//! The survey's exact path, and its band path, against a vectorised numpy and scipy script that does the same work, on the same cores:
 //! `cargo bench --bench against_numpy`. Needs `python3` with numpy and scipy (`THORNMAP_PYTHON` names another one).
 //!
 //! Both sides survey the same channels with the same record, window, band and outputs; runs alternate, and a figure is
@@ -14,7 +14,7 @@ use std::process::ExitCode;
 use std::time::Instant;
 
 use script::{Found, Script};
-use survey::{Job, Transform};
+use survey::{Engine, Job, Transform};
 
 /// Paired runs of each comparison.
 const PAIRS: usize = 7;
@@ -27,11 +27,20 @@ const TURN: usize = 8;
 /// Largest difference of levels and noise between both sides \[dB\]: rounding on levels near −60 dBc, where the
 /// strongest bin is some 100 dB higher, stays far below.
 const TOLERANCE_DB: f64 = 1e-6;
+/// Largest difference between the engines \[dB\].
+const BAND_TOLERANCE_DB: f64 = 0.1;
+/// Engines and how they are called.
+const ENGINES: [(Engine, &str); 2] = [(Engine::Exact, "exact path"), (Engine::Band, "band path ")];
 
 fn main() -> ExitCode {
-    let job = Job::new(CHANNELS);
+    let mut job = Job::new(CHANNELS);
     println!("{}", job.describe());
-    beside_the_transform(&job);
+    println!("one channel on one core against the bare real FFT of its record, medians of {PAIRS} paired runs:");
+    for (engine, name) in ENGINES {
+        job.engine = engine;
+        beside_the_transform(&job, name);
+    }
+    let mut agree = compare_engines(&mut job);
     let mut script = match Script::start(&job) {
         Ok(script) => script,
         Err(reason) => {
@@ -40,39 +49,44 @@ fn main() -> ExitCode {
         }
     };
     println!("\nagainst {} on {} cores, {CHANNELS} channels a run:", script.versions, job.cores());
-    let agree = compare_numbers(&job, &mut script);
+    job.engine = Engine::Exact;
+    agree &= compare_numbers(&job, &mut script);
     for (route, what) in [
         ("output", "script through the divider's outputs"),
         ("residue", "script with the short cut over the third residue"),
     ] {
-        let mut ratios = Vec::new();
-        let (mut ours, mut theirs) = (Vec::new(), Vec::new());
-        for _ in 0..PAIRS {
-            let theirs_s = script.time(route);
-            let ours_s = seconds(|| drop(job.survey()));
-            ratios.push(theirs_s / ours_s);
-            ours.push(ours_s);
-            theirs.push(theirs_s);
+        for (engine, name) in ENGINES {
+            job.engine = engine;
+            beside_the_script(&job, name, &mut script, (route, what));
         }
-        let per_channel = |times: &mut Vec<f64>| 1e3 * median(times) / CHANNELS as f64;
-        println!(
-            "  exact path is {:5.1} x the {what} ({:.3} and {:.3} ms a channel; ratios {:.1} … {:.1})",
-            median(&mut ratios),
-            per_channel(&mut ours),
-            per_channel(&mut theirs),
-            ratios[0],
-            ratios[PAIRS - 1],
-        );
     }
-    println!(
-        "  scipy's real FFT of the record alone takes {:.2} x ours",
-        script.transform_s() / Transform::new(&job).shortest_s(30)
-    );
+    let ratio = script.transform_s() / Transform::new(&job).shortest_s(30);
+    println!("  scipy's real FFT of the record alone takes {ratio:.2} x ours");
     if agree { ExitCode::SUCCESS } else { ExitCode::FAILURE }
 }
 
+/// Compares surveys on all cores with those of the script.
+fn beside_the_script(job: &Job, name: &str, script: &mut Script, (route, what): (&str, &str)) {
+    let (mut ratios, mut ours, mut theirs) = (Vec::new(), Vec::new(), Vec::new());
+    for _ in 0..PAIRS {
+        let theirs_s = script.time(route);
+        let ours_s = seconds(|| drop(job.survey()));
+        ratios.push(theirs_s / ours_s);
+        ours.push(1e3 * ours_s / CHANNELS as f64);
+        theirs.push(1e3 * theirs_s / CHANNELS as f64);
+    }
+    println!(
+        "  {name} is {:5.1} x the {what} ({:.3} and {:.3} ms a channel; ratios {:.1} … {:.1})",
+        median(&mut ratios),
+        median(&mut ours),
+        median(&mut theirs),
+        ratios[0],
+        ratios[PAIRS - 1],
+    );
+}
+
 /// Compares a channel on one core with the bare transform of its record.
-fn beside_the_transform(job: &Job) {
+fn beside_the_transform(job: &Job, name: &str) {
     let mut transform = Transform::new(job);
     let mut worker = job.worker();
     let (mut ratios, mut bare) = (Vec::new(), Vec::new());
@@ -91,7 +105,7 @@ fn beside_the_transform(job: &Job) {
         bare.push(median(&mut transforms_s));
     }
     println!(
-        "one channel on one core takes {:.2} x the bare real FFT of its record ({:.3} ms; ratios {:.2} … {:.2})",
+        "  {name} takes {:.2} x the transform ({:.3} ms; ratios {:.2} … {:.2})",
         median(&mut ratios),
         1e3 * median(&mut bare),
         ratios[0],
@@ -125,6 +139,31 @@ fn compare_numbers(job: &Job, script: &mut Script) -> bool {
         );
         agree &= worst_db <= TOLERANCE_DB;
     }
+    agree
+}
+
+/// Prints the largest differences between the engines; returns whether they are within the tolerance.
+fn compare_engines(job: &mut Job) -> bool {
+    job.engine = Engine::Exact;
+    let exact = job.survey();
+    job.engine = Engine::Band;
+    let (mut worst_db, mut worst_noise_db, mut lines) = (0.0f64, 0.0f64, 0);
+    for (exact, band) in exact.iter().zip(job.survey()) {
+        // A line below the noise in its own width is noise: a reading nobody relies on.
+        let least_dbc = job.noise_of_a_line_dbc(exact.noise_rad);
+        let levels = exact.levels_dbc.iter().flatten().zip(band.levels_dbc.iter().flatten());
+        for (exact, band) in levels.filter(|(exact, _)| **exact > least_dbc) {
+            worst_db = worst_db.max((exact - band).abs());
+            lines += 1;
+        }
+        worst_noise_db = worst_noise_db.max(20.0 * (exact.noise_rad / band.noise_rad).log10().abs());
+    }
+    assert!(lines > CHANNELS, "only {lines} lines were compared");
+    let agree = worst_db.max(worst_noise_db) <= BAND_TOLERANCE_DB;
+    let verdict = if agree { "agree" } else { "DO NOT AGREE" };
+    println!(
+        "  both {verdict} within {BAND_TOLERANCE_DB} dB: {lines} levels above their noise {worst_db:.4} dB, noise {worst_noise_db:.4} dB at worst"
+    );
     agree
 }
 

@@ -9,7 +9,7 @@ use rayon::prelude::*;
 use realfft::{RealFftPlanner, RealToComplex};
 use serde_json::{Value, json};
 use thornmap::modulator::{Dither, ModulatorConfig, ModulatorError, ModulatorSettings, Modulus, PhaseRun, Structure};
-use thornmap::spectrum::{FftScratch, FftStage, RecordWindow, Window, sideband_dbc};
+use thornmap::spectrum::{BandPlan, FftScratch, FftStage, RecordWindow, Window, sideband_dbc};
 use thornmap::tones::{Charge, PhaseDensity, settle};
 
 /// Samples of a record, as a survey takes by default.
@@ -46,7 +46,19 @@ pub struct Job {
     settings: ModulatorSettings,
     stage: FftStage,
     window: RecordWindow,
+    band: BandPlan,
     last_bin: usize,
+    /// How a record becomes a spectrum.
+    pub engine: Engine,
+}
+
+/// The ways of the library from a record to the low part of its spectrum.
+#[derive(Debug, Clone, Copy, PartialEq, Eq)]
+pub enum Engine {
+    /// One real FFT of the whole record.
+    Exact,
+    /// Decimated on the fly, then a short FFT.
+    Band,
 }
 
 impl Job {
@@ -68,6 +80,7 @@ impl Job {
                 }
             })
             .collect();
+        let last_bin = usize::try_from(BAND_HZ * RECORD as u64 / PFD_HZ).unwrap();
         let settings = ModulatorSettings {
             structure: Structure::Mash,
             order: 3,
@@ -82,7 +95,9 @@ impl Job {
             settings,
             stage: FftStage::new(),
             window: RecordWindow::new(Window::FourTerm, RECORD),
-            last_bin: usize::try_from(BAND_HZ * RECORD as u64 / PFD_HZ).unwrap(),
+            band: BandPlan::new(Window::FourTerm, RECORD, last_bin).expect("the band is narrow"),
+            last_bin,
+            engine: Engine::Exact,
         }
     }
 
@@ -108,6 +123,12 @@ impl Job {
         rayon::current_num_threads()
     }
 
+    /// Returns the level of noise that reads as one line \[dBc\], from that of the whole band.
+    pub fn noise_of_a_line_dbc(&self, noise_rad: f64) -> f64 {
+        let bins = 2.0 * (self.last_bin - FIRST_BIN + 1) as f64 / Window::FourTerm.noise_bandwidth_bins();
+        20.0 * (noise_rad / bins.sqrt()).log10()
+    }
+
     /// Returns the channels.
     pub fn channels(&self) -> &[Channel] {
         &self.channels
@@ -130,25 +151,39 @@ impl Job {
         let scale = 1.0 / MODULUS as f64;
         // The mean has a closed form for this order: one pass makes, centres, bends and weights the record.
         let shift = channel.offset_cycles - run.mean_numerator(RECORD as u64).unwrap() * scale;
-        let bend = |numerator: f64| {
+        let bend = move |numerator: f64| {
             let error = numerator * scale + shift;
             error + MISMATCH / 2.0 * error.abs()
         };
         let source = |part: &mut [f64]| run.fill(part);
-        let spectrum = self.stage.record::<ModulatorError>(&self.window, source, bend, scratch).unwrap();
+        match self.engine {
+            Engine::Exact => {
+                let found = self.stage.record::<ModulatorError>(&self.window, source, bend, scratch).unwrap();
+                let noise = |residues: &[u64]| found.noise_power(FIRST_BIN, self.last_bin, residues, MODULUS);
+                self.read(channel.word, &|residue| found.line(residue, MODULUS), &noise)
+            }
+            Engine::Band => {
+                let found = self.stage.band::<ModulatorError>(&self.band, source, bend, scratch).unwrap();
+                let noise = |residues: &[u64]| found.noise_power(FIRST_BIN, self.last_bin, residues, MODULUS);
+                self.read(channel.word, &|residue| found.line(residue, MODULUS), &noise)
+            }
+        }
+    }
+
+    /// Reads levels and noise off a spectrum.
+    fn read(&self, word: u64, line: &dyn Fn(u64) -> Complex64, noise_power: &dyn Fn(&[u64]) -> f64) -> Surveyed {
         let edge = self.last_bin as f64 * MODULUS as f64 / RECORD as f64;
         let (mut residues, mut count) = ([0; HARMONICS], 0);
         let mut levels_dbc = [None; HARMONICS];
         for (harmonic, level_dbc) in (1u64..).zip(&mut levels_dbc) {
-            let residue = harmonic * channel.word % MODULUS;
+            let residue = harmonic * word % MODULUS;
             let residue = residue.min(MODULUS - residue);
             if residue > 0 && residue as f64 <= edge {
-                *level_dbc = sideband_dbc(spectrum.line(residue, MODULUS).norm());
+                *level_dbc = sideband_dbc(line(residue).norm());
                 (residues[count], count) = (residue, count + 1);
             }
         }
-        let power = spectrum.noise_power(FIRST_BIN, self.last_bin, &residues[..count], MODULUS);
-        Surveyed { levels_dbc, noise_rad: TAU * power.sqrt() }
+        Surveyed { levels_dbc, noise_rad: TAU * noise_power(&residues[..count]).sqrt() }
     }
 }
 

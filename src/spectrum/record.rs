@@ -15,8 +15,9 @@ const BLOCK: usize = 1024;
 pub struct RecordWindow {
     window: Window,
     weights: Vec<f64>,
-    sum: f64,
     squares: f64,
+    /// How long before the record the window starts \[samples\].
+    early: f64,
 }
 
 impl RecordWindow {
@@ -28,8 +29,20 @@ impl RecordWindow {
     pub fn new(window: Window, length: usize) -> Self {
         assert!(length > 0, "a record needs at least one sample");
         let weights = window.weights(length);
-        let (sum, squares) = (weights.iter().sum(), weights.iter().map(|weight| weight * weight).sum());
-        Self { window, weights, sum, squares }
+        Self::of(window, weights, 0.0)
+    }
+
+    /// Returns every `factor`-th weight of a longer record from `first` on, around its end: for a decimated record whose
+    /// samples stand for later moments.
+    pub(super) fn decimated(window: Window, length: usize, factor: usize, first: usize) -> Self {
+        let whole = window.weights(length);
+        let weights = (0..length / factor).map(|n| whole[(first + n * factor) % length]).collect();
+        Self::of(window, weights, first as f64 / factor as f64)
+    }
+
+    fn of(window: Window, weights: Vec<f64>, early: f64) -> Self {
+        let squares = weights.iter().map(|weight| weight * weight).sum();
+        Self { window, weights, squares, early }
     }
 
     /// Returns the weights, numbers of 0 … 1.
@@ -58,7 +71,11 @@ impl RecordWindow {
             let turns = turns as f64;
             gain += match turns {
                 0.0 => comb(distance_bins) * *coefficient,
-                _ => (comb(distance_bins + turns) + comb(distance_bins - turns)) * (sign * coefficient / 2.0),
+                _ => {
+                    let turn = Complex64::cis(2.0 * PI * turns * self.early / length);
+                    (comb(distance_bins + turns) * turn + comb(distance_bins - turns) * turn.conj())
+                        * (sign * coefficient / 2.0)
+                }
             };
             sign = -sign;
         }
@@ -96,7 +113,8 @@ impl FftStage {
     ///
     /// Everything goes straight into the transform's input: samples are made, bent and weighted while they are in the
     /// first-level cache, and nothing is allocated once the buffers have grown. The mean is not removed: let `source`
-    /// or `bend` take it off, or read no line within [`Window::half_lobe_bins`] of zero.
+    /// or `bend` take it off, or read no line within [`Window::half_lobe_bins`] of zero. A closure that owns its numbers
+    /// (`move`) is several times faster than one that refers to them: only then does the compiler use vectors.
     ///
     /// # Errors
     /// What `source` gives.
@@ -121,21 +139,32 @@ impl FftStage {
         &self,
         window: &'a RecordWindow,
         mut source: impl FnMut(&mut [f64]) -> Result<(), E>,
-        bend: impl Fn(f64) -> f64,
+        bend: impl Fn(f64) -> f64 + Copy,
         scratch: &'a mut FftScratch,
     ) -> Result<RecordSpectrum<'a>, E> {
         scratch.input.resize(window.weights.len(), 0.0);
         let arch = Arch::new();
         for (part, weights) in scratch.input.chunks_mut(BLOCK).zip(window.weights.chunks(BLOCK)) {
             source(part)?;
-            arch.dispatch(Weigh { part, weights, bend: &bend });
+            arch.dispatch(Weigh { part, weights, bend });
         }
         self.transform(scratch);
-        Ok(RecordSpectrum { bins: &scratch.output, window })
+        Ok(RecordSpectrum::new(&scratch.output, window))
     }
 }
 
-impl RecordSpectrum<'_> {
+impl<'a> RecordSpectrum<'a> {
+    /// Returns the spectrum that a transform left.
+    pub(super) const fn new(bins: &'a [Complex64], window: &'a RecordWindow) -> Self {
+        Self { bins, window }
+    }
+
+    /// Returns a bin as the transform left it.
+    #[cfg(test)]
+    pub(super) fn bin(&self, bin: usize) -> Complex64 {
+        self.bins[bin]
+    }
+
     /// Returns the line coefficient at exactly `residue/modulus` cycles per sample, in the unit of the samples: the
     /// nearest bin over what the window leaves of a line at that distance.
     ///
@@ -150,7 +179,7 @@ impl RecordSpectrum<'_> {
     }
 
     /// Returns the nearest bin and how far above it the line lies, from integers.
-    fn place(&self, residue: u64, modulus: u64) -> (usize, f64) {
+    pub(super) fn place(&self, residue: u64, modulus: u64) -> (usize, f64) {
         assert!(residue <= modulus / 2, "a line lies below half the sample rate");
         let scaled = u128::from(residue) * self.window.weights.len() as u128;
         let modulus = u128::from(modulus);
@@ -167,12 +196,21 @@ impl RecordSpectrum<'_> {
     /// As [`RecordSpectrum::line`].
     #[must_use]
     pub fn noise_power(&self, first: usize, last: usize, residues: &[u64], modulus: u64) -> f64 {
+        let places = residues.iter().map(|residue| self.place(*residue, modulus).0);
+        self.noise_of(first, last, places, |_| 1.0)
+    }
+
+    /// Returns the noise of [`RecordSpectrum::noise_power`] beside lines at bins, each bin's power times its factor.
+    pub(super) fn noise_of(
+        &self,
+        first: usize,
+        last: usize,
+        places: impl Iterator<Item = usize> + Clone,
+        factor: impl Fn(usize) -> f64,
+    ) -> f64 {
         let reach = self.window.window.half_lobe_bins();
         let last = last.min(self.bins.len() - 1);
-        let lobes = || {
-            let bins = residues.iter().map(|residue| self.place(*residue, modulus).0);
-            bins.map(|bin| (bin.saturating_sub(reach), bin + reach))
-        };
+        let lobes = || places.clone().map(|bin| (bin.saturating_sub(reach), bin + reach));
         let mut sum = 0.0;
         let mut at = first;
         // From stretch to stretch; lines are few, so each is looked at again.
@@ -183,7 +221,7 @@ impl RecordSpectrum<'_> {
             }
             let next = lobes().map(|(low, _)| low).filter(|low| *low > at).min();
             let stop = next.unwrap_or(last + 1).min(last + 1);
-            sum += self.bins[at..stop].iter().map(Complex64::norm_sqr).sum::<f64>();
+            sum += (at..stop).map(|bin| self.bins[bin].norm_sqr() * factor(bin)).sum::<f64>();
             at = stop;
         }
         2.0 * sum / (self.window.weights.len() as f64 * self.window.squares)
