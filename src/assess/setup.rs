@@ -93,6 +93,7 @@ pub struct Setup<'p> {
     components: Option<FilterComponents>,
     design_divider: f64,
     design_response: LoopResponse,
+    carried: Vec<Option<AnchorLevel>>,
     anchors: Vec<AnchorLevel>,
     clock_anchors: Vec<Option<AnchorLevel>>,
     fft: FftStage,
@@ -136,6 +137,7 @@ impl<'p> Setup<'p> {
             design_divider,
             warnings: design_response.warnings(),
             design_response,
+            carried: Vec::new(),
             anchors: Vec::new(),
             clock_anchors: Vec::new(),
             fft: FftStage::new(),
@@ -169,6 +171,7 @@ impl<'p> Setup<'p> {
             design_divider,
             warnings: design_response.warnings(),
             design_response,
+            carried: self.carried.clone(),
             anchors: self.anchors.clone(),
             clock_anchors: self.clock_anchors.clone(),
             fft: FftStage::new(),
@@ -215,7 +218,14 @@ impl<'p> Setup<'p> {
         &self.design_response
     }
 
-    /// Returns the anchors, each with the loop's transfer where it was taken.
+    /// Returns the anchors in the order of the plan, as given, each with the loop's transfer where it was taken; `None`
+    /// for one that has no place.
+    #[must_use]
+    pub fn carried_anchors(&self) -> &[Option<AnchorLevel>] {
+        &self.carried
+    }
+
+    /// Returns the couplings: anchors of one path and q fitted to one, with the loop's transfer where the first was taken.
     #[must_use]
     pub fn anchors(&self) -> &[AnchorLevel] {
         &self.anchors
@@ -322,13 +332,16 @@ impl<'p> Setup<'p> {
 
     /// Carries every anchor to the place where it was taken; one that has no place is left out with a warning.
     fn carry_anchors(&mut self) -> Result<(), AssessError> {
-        let mut anchors = Vec::new();
+        let mut carried = Vec::new();
         for (index, anchor) in self.plan.anchors.iter().enumerate() {
-            match self.carried(anchor, None)? {
-                Ok(level) => anchors.push(level),
-                Err(why) => self.warnings.push(format!("anchor {} is not used: {why}", index + 1)),
+            let level = self.carried(anchor, None)?;
+            if let Err(why) = &level {
+                self.warnings.push(format!("anchor {} is not used: {why}", index + 1));
             }
+            carried.push(level.ok());
         }
+        let anchors: Vec<AnchorLevel> = carried.iter().copied().flatten().collect();
+        self.carried = carried;
         let mut clock_anchors = Vec::new();
         for clock in &self.plan.clocks {
             let carried =

@@ -7,7 +7,8 @@ use serde::Serialize;
 
 use crate::base::Frequency;
 use crate::loop_model::{
-    LoopResponse, Sample, SimulatedDetector, Simulation, SimulationError, SimulationInput, Within, reference_tone_dbc,
+    LoopResponse, Sample, SimulatedDetector, Simulation, SimulationError, SimulationInput, StepResponse, Within,
+    reference_tone_dbc,
 };
 use crate::modulator::{ModulatorConfig, period, start};
 use crate::plan::MismatchPoints;
@@ -102,6 +103,11 @@ pub struct Settling {
     pub tolerance_hz: f64,
     /// Time after which the output stays within the tolerance \[s\]; `None` where it does not in the time simulated.
     pub settled_after_s: Option<f64>,
+    /// The same of the continuous linear loop, in closed form: no sampling, no slips; `None` where two poles coincide.
+    pub linear_settled_after_s: Option<f64>,
+    /// Its error at the output at each sample \[Hz\]; empty where it is unknown.
+    #[serde(skip)]
+    pub linear_hz: Vec<f64>,
     /// Comparison cycles lost on the way.
     pub slips: i64,
     /// (time \[s\], output frequency error \[Hz\], output phase error \[deg\]) at reference edges.
@@ -412,7 +418,13 @@ pub fn simulate_step(
     let end = samples.last().map_or(0.0, |sample: &Sample| sample.phase_cycles + static_cycles);
     #[allow(clippy::cast_possible_truncation, reason = "a count of lost cycles")]
     let slips = (end / ratio).round() as i64;
+    let linear = setup
+        .network()
+        .and_then(|network| StepResponse::new(network, setup.plan().detector.current_a, stage.gain_hz_per_v, ratio));
+    let linear_settled_after_s = linear.as_ref().map(|step| step.settled_after_s(tolerance_hz / step_hz.abs()));
+    let linear_hz = linear
+        .map_or_else(Vec::new, |step| samples.iter().map(|sample| -step_hz * step.error_at(sample.time_s)).collect());
     let samples =
         samples.iter().map(|s| (s.time_s, s.frequency_hz / divider, s.phase_cycles * 360.0 / divider)).collect();
-    Ok(Settling { channel, step_hz, tolerance_hz, settled_after_s, slips, samples })
+    Ok(Settling { channel, step_hz, tolerance_hz, settled_after_s, linear_settled_after_s, linear_hz, slips, samples })
 }

@@ -91,6 +91,17 @@ pub enum DetailChoice {
     Flagged,
 }
 
+/// When the report of a survey holds cures, measurements and options.
+#[derive(Debug, Clone, Copy, PartialEq, Eq, ValueEnum)]
+pub enum CuresChoice {
+    /// For plans of up to 2,000 channels
+    Auto,
+    /// For every plan
+    Always,
+    /// Never: the survey alone
+    Never,
+}
+
 /// A plan file.
 #[derive(Debug, Args)]
 pub struct PlanArgument {
@@ -114,6 +125,18 @@ pub struct SurveyArguments {
     /// Channels written in full [default: all up to 20,000 channels, flagged beyond]
     #[arg(long)]
     pub detail: Option<DetailChoice>,
+    /// Cures, measurements and modulators compared in the report
+    #[arg(long, value_name = "WHEN", default_value = "auto")]
+    pub cures: CuresChoice,
+    /// The report as Markdown too, report.md
+    #[arg(long)]
+    pub markdown: bool,
+    /// The report as PDF too, report.pdf, printed by a Chromium of this machine (THORNMAP_CHROMIUM names one)
+    #[arg(long)]
+    pub pdf: bool,
+    /// Each plot as PNG too
+    #[arg(long)]
+    pub png: bool,
     #[command(flatten)]
     #[allow(missing_docs, reason = "clap shows the options of the group itself")]
     pub common: CommonOptions,

@@ -3,13 +3,15 @@
 use std::path::{Path, PathBuf};
 
 use crate::assess::AssessError;
+use crate::decide::dossier::{Dossier, MOST_CHANNELS, dossier, noise_budget, steps};
 use crate::plan::{Plan, demo_plan};
 use crate::report::{
-    Detail, RenderOptions, ReportError, add_files, beat_files, beats_text, check_target, render, survey_json, write_set,
+    Detail, RenderOptions, ReportError, ReportFile, add_files, beat_files, beats_text, check_target, pdf, render_with,
+    survey_json, write_set,
 };
 use crate::survey::{SurveyResult, beats, survey};
 
-use super::arguments::{DetailChoice, FailOn, SurveyArguments};
+use super::arguments::{CuresChoice, DetailChoice, FailOn, SurveyArguments};
 use super::failure::Failure;
 use super::output::{self, Voice};
 use super::plan_file;
@@ -42,8 +44,15 @@ pub fn run(arguments: &SurveyArguments) -> Result<(), Failure> {
         None if channels > FULL_DETAIL_CHANNELS => Detail::Flagged,
         None => Detail::All,
     };
-    let options = RenderOptions { detail };
-    let set = render(&result, &options).map_err(report_failure)?;
+    let options = RenderOptions { detail, markdown: arguments.markdown, png: arguments.png };
+    let dossier = in_pool(arguments.common.jobs, || decisions(&result, arguments.cures, voice))?
+        .map_err(|error| assess_failure(&plan, &error))?;
+    let mut set = render_with(&result, &dossier, &options).map_err(report_failure)?;
+    if arguments.pdf {
+        let page = set.get("report.html").unwrap_or_default();
+        let bytes = pdf(page, std::env::var_os("THORNMAP_CHROMIUM").as_ref()).map_err(report_failure)?;
+        set.add(ReportFile { path: "report.pdf".into(), bytes });
+    }
     write_set(&out, &set).map_err(report_failure)?;
     if !neighbours.is_empty() {
         let found = in_pool(arguments.common.jobs, || beats(&result.channels, &plan, &neighbours))?
@@ -65,6 +74,22 @@ pub fn run(arguments: &SurveyArguments) -> Result<(), Failure> {
         output::print(&survey_json(&result, &options).map_err(report_failure)?)?;
     }
     flagged(arguments.common.fail_on, result.summary.bad, result.summary.marginal)
+}
+
+/// Returns the decisions for the report, as many as are asked for.
+fn decisions(result: &SurveyResult, cures: CuresChoice, voice: Voice) -> Result<Dossier, AssessError> {
+    let is_wanted = match cures {
+        CuresChoice::Auto => result.summary.channels <= MOST_CHANNELS,
+        CuresChoice::Always => true,
+        CuresChoice::Never => false,
+    };
+    if !is_wanted {
+        return Ok(Dossier { budget: noise_budget(result)?, ..Dossier::default() });
+    }
+    let bar = Bar::new(steps(&result.plan), "cures and options", voice);
+    let found = dossier(result, &|| bar.advance(1));
+    bar.finish();
+    found
 }
 
 /// Returns the run in one sentence.

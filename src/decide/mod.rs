@@ -3,6 +3,7 @@
 pub mod calibrate;
 pub mod compare;
 pub mod diff;
+pub mod dossier;
 pub mod export;
 pub mod identify;
 pub mod measure_list;

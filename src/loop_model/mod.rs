@@ -11,6 +11,7 @@ mod response;
 mod settings;
 mod simulation;
 mod stability;
+mod step_response;
 
 pub use charge::{ChargeCurve, ChargeTerms, static_charge_cycles};
 pub use design::FilterDesign;
@@ -22,3 +23,4 @@ pub use reference_tone::{reference_tone_dbc, ripple_tone_dbc};
 pub use response::{LoopPoint, LoopResponse};
 pub use settings::{ChargeTable, FilterComponents, LoopModelError, NoisePoints, OscillatorNoise, ResponseTable};
 pub use simulation::{Sample, SimulatedDetector, Simulation, SimulationError, SimulationInput, Within};
+pub use step_response::StepResponse;

@@ -90,6 +90,11 @@ impl FilterNetwork {
         self.direct_ohm
     }
 
+    /// Returns D(s), rising powers, and T2 \[s\], where `Z(s) = (1 + s·T2)/(s·D(s))`.
+    pub(super) fn polynomials(&self) -> (Vec<f64>, f64) {
+        denominator(&self.components)
+    }
+
     /// Returns Z(s) \[Ω\] at `s` \[rad/s\], which is no pole and not zero.
     #[must_use]
     pub fn impedance(&self, s: Complex64) -> Complex64 {

@@ -46,6 +46,9 @@ pub struct Plan {
     /// Every input figure and every default that applies, in file order, then defaults.
     #[serde(skip)]
     pub assumptions: Vec<Assumption>,
+    /// Requirements that were given (limits of the plan and of groups), with basis and note.
+    #[serde(skip)]
+    pub required: Vec<Assumption>,
     /// Basis of each given figure by dotted key, for the basis of a result.
     #[serde(skip)]
     pub basis: BTreeMap<String, Basis>,

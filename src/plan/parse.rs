@@ -136,6 +136,7 @@ fn read(reader: &mut Reader, root: &DeTable, text: &str, stem: &str, load: Load)
         alternatives,
         analysis,
         assumptions,
+        required: reader.required.clone(),
         basis: reader.basis.clone(),
         warnings: reader.warnings.clone(),
         sha256: hash(text),

@@ -41,6 +41,8 @@ pub struct Reader<'t> {
     pub problems: Vec<PlanProblem>,
     /// Figures that were given, in file order of reading.
     pub given: Vec<Assumption>,
+    /// Requirements that were given, with basis and note.
+    pub required: Vec<Assumption>,
     /// Defaults that apply.
     pub defaults: Vec<Assumption>,
     /// Basis by dotted key.
@@ -63,6 +65,7 @@ impl<'t> Reader<'t> {
             most_channels,
             problems: Vec::new(),
             given: Vec::new(),
+            required: Vec::new(),
             defaults: Vec::new(),
             basis: BTreeMap::new(),
             warnings: Vec::new(),
@@ -198,10 +201,13 @@ impl<'t> Reader<'t> {
                 }
             }
         }
-        if !REQUIREMENTS.contains(&section.kind) {
-            let text = self.text.get(plain.span()).unwrap_or_default();
-            let text = text.split_whitespace().collect::<Vec<_>>().join(" ").trim_matches('"').to_owned();
-            self.given.push(Assumption { key: path.clone(), value: text, basis, note });
+        let text = self.text.get(plain.span()).unwrap_or_default();
+        let text = text.split_whitespace().collect::<Vec<_>>().join(" ").trim_matches('"').to_owned();
+        let found = Assumption { key: path.clone(), value: text, basis, note };
+        if section.kind == "limits" {
+            self.required.push(found);
+        } else if !REQUIREMENTS.contains(&section.kind) {
+            self.given.push(found);
         }
         self.basis.insert(path, basis);
         Some(plain)

@@ -21,6 +21,7 @@ fn unit_of(figure: &FittedFigure) -> (f64, &'static str) {
     match figure.unit {
         "ratio" => (100.0, "%"),
         "A" => (1e6, "uA"),
+        "dB" => (1.0, "dB"),
         _ => (1.0, "dBc"),
     }
 }
@@ -70,6 +71,7 @@ pub fn calibration_text(plan: &Plan, found: &Calibration) -> String {
     text.push_str("\nfitted\n");
     for fitted in &found.fitted {
         text.push_str(&format!("  {}\n", figure(fitted)));
+        text.push_str(&format!("    told by {}\n", fitted.covered.join("; ")));
     }
     if found.fitted.is_empty() {
         text.push_str("  nothing\n");
@@ -116,23 +118,45 @@ pub fn calibration_json(plan: &Plan, found: &Calibration, assumptions: &[Assumpt
     json_text("calibration", &document).map(|text| format!("{text}\n"))
 }
 
-/// Returns the plan's text with the fitted figures in it, `basis = "measured"`, all else as typed.
+/// A plan's text with fitted figures in it.
+#[derive(Debug, Clone, PartialEq, Eq)]
+pub struct CalibratedPlan {
+    /// The text; all else is as typed.
+    pub text: String,
+    /// Places whose figure was written, `basis = "measured"`.
+    pub written: usize,
+    /// Figures that have no place in the text and are not in it.
+    pub missed: Vec<String>,
+}
+
+/// Returns the plan's text with the fitted figures in it.
 #[must_use]
-pub fn calibrated_plan(text: &str, found: &Calibration) -> String {
-    let rows = found.rows.iter().filter(|row| row.unused.is_none()).count();
-    let changes: Vec<(Place, String)> = found
-        .fitted
-        .iter()
-        .map(|figure| {
-            let (scale, unit) = unit_of(figure);
-            let (low, high) = (figure.interval.0 * scale, figure.interval.1 * scale);
-            let note = format!("calibrated from {rows} rows, 95 % interval {low:.3} to {high:.3} {unit}");
-            let value = figure.fitted * scale;
-            (
-                figure.place.clone(),
-                format!("{{ value = \"{value:.4} {unit}\", basis = \"measured\", note = \"{note}\" }}"),
-            )
-        })
-        .collect();
-    rewritten(text, &changes)
+pub fn calibrated_plan(text: &str, found: &Calibration) -> CalibratedPlan {
+    let mut changes = Vec::new();
+    let mut keys = Vec::new();
+    for figure in &found.fitted {
+        let (scale, unit) = unit_of(figure);
+        // The first sentence of the range counts the rows.
+        let rows = figure.covered.first().map_or("no row", String::as_str);
+        for placed in &figure.places {
+            let (low, high) = (placed.interval.0 * scale, placed.interval.1 * scale);
+            let note = format!("calibrated from {rows}, 95 % interval {low:.3} to {high:.3} {unit}");
+            let value = placed.value * scale;
+            let toml = format!("{{ value = \"{value:.4} {unit}\", basis = \"measured\", note = \"{note}\" }}");
+            changes.push((placed.place.clone(), toml));
+            keys.push(&figure.key);
+        }
+    }
+    let (text, missed) = rewritten(text, &changes);
+    let is_missed = |place: &Place| missed.contains(place);
+    CalibratedPlan {
+        text,
+        written: changes.len() - missed.len(),
+        missed: changes
+            .iter()
+            .zip(keys)
+            .filter(|((place, _), _)| is_missed(place))
+            .map(|(_, key)| key.clone())
+            .collect(),
+    }
 }

@@ -5,7 +5,7 @@ use num_bigint::BigUint;
 use serde_json::json;
 
 use super::json::json_text;
-use super::page::policy;
+use super::policy::policy;
 use super::{ReportError, ReportFile};
 use crate::base::Assumption;
 use crate::decide::compare::{Comparison, RANKING_RULE, Ranked};
@@ -172,7 +172,7 @@ fn page(plan: &Plan, comparison: &Comparison) -> Result<String, ReportError> {
     let css = include_str!("templates/report.css").replace('\r', "");
     let dash = |value: Option<f64>| value.map_or_else(|| "–".to_owned(), |value| format!("{value:.2}"));
     let page = Page {
-        policy: policy(&css),
+        policy: policy(&css, None),
         title: &plan.identity.title,
         recommendation: &comparison.recommendation,
         sample: sample(comparison),

@@ -5,7 +5,7 @@ use askama::Template;
 use super::ReportError;
 use super::figures::{decibel, with_prefix};
 use super::json::json_text;
-use super::page::policy;
+use super::policy::policy;
 use crate::decide::diff::{Cause, ChannelChange, Difference, InputChange, Side, ToneChange, readable};
 
 /// Channels that the text lists; the rest is counted.
@@ -254,7 +254,7 @@ pub fn difference_html(difference: &Difference) -> Result<String, ReportError> {
     let page = Page {
         any_rule: rows.iter().any(|row| !row.reasons.is_empty()),
         any_word: rows.iter().any(|row| !row.word.is_empty()),
-        policy: policy(&css),
+        policy: policy(&css, None),
         title: &difference.new.title,
         counts: counts_sentence(difference),
         cause: cause_sentence(&difference.cause),

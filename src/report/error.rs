@@ -35,8 +35,24 @@ pub enum ReportError {
         found: String,
     },
     /// The page cannot be put together.
-    #[error("report.html cannot be put together: {0}")]
+    #[error("the page cannot be put together: {0}")]
     Page(#[from] askama::Error),
+    /// No browser is at hand that could print the page.
+    #[error(
+        "--pdf needs a Chromium, and none was found (tried {tried}); install one, name it in THORNMAP_CHROMIUM, or print report.html from any browser"
+    )]
+    NoBrowser {
+        /// Names tried.
+        tried: String,
+    },
+    /// The browser did not print the page.
+    #[error("{name} did not print report.html: {found}; print it from any browser")]
+    Browser {
+        /// Its name.
+        name: String,
+        /// What happened.
+        found: String,
+    },
     /// The output folder holds something else.
     #[error(
         "{} holds {found} and no report set of ours; choose a folder that is absent, empty or an earlier report set",

@@ -5,7 +5,7 @@ use askama::Template;
 use super::columns::inert;
 use super::figures::{decibel, with_prefix};
 use super::json::json_text;
-use super::page::policy;
+use super::policy::policy;
 use super::{ReportError, ReportFile};
 use crate::base::{Assumption, Exact, Frequency};
 use crate::decide::measure_list::{Line, MeasureChannel, MeasureList};
@@ -204,7 +204,7 @@ fn row(channel: &MeasureChannel, line: &Line) -> Row {
 fn page(list: &MeasureList) -> Result<String, ReportError> {
     let css = include_str!("templates/report.css").replace('\r', "");
     let page = Page {
-        policy: policy(&css),
+        policy: policy(&css, None),
         title: &list.title,
         length: length(list),
         cautions: &list.cautions,

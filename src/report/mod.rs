@@ -13,13 +13,17 @@ mod firmware;
 mod firmware_c;
 mod identification;
 mod json;
+mod markdown;
 mod measurement;
 mod page;
-mod page_rows;
 mod paint;
+mod pdf;
 mod plots;
+mod png;
+mod policy;
 mod positions;
 mod remedy;
+mod render;
 mod sequence;
 mod sequence_files;
 mod simulation;
@@ -39,8 +43,10 @@ pub use firmware::{FirmwareFormat, firmware_bytes};
 pub use identification::{identification_json, identification_text};
 pub use json::json_text;
 pub use measurement::{MEASURED_COLUMNS, measure_files, measure_json, measure_text};
+pub use pdf::pdf;
 pub use positions::{hunt_json, hunt_text, intervals_json, intervals_text};
 pub use remedy::{remedy_files, remedy_json, remedy_text};
+pub use render::{render, render_with};
 pub use sequence::{OffsetScale, capture_json, capture_text, seeds_text, sequence_json, sequence_plot, sequence_text};
 pub use sequence_files::{CaptureError, SequenceForm, read_capture, sequence_bytes};
 pub use simulation::{
@@ -51,8 +57,6 @@ pub use survey_json::survey_json;
 pub use write::{add_files, check_target, write_set};
 
 use serde::Serialize;
-
-use crate::survey::SurveyResult;
 
 /// The file that marks a folder as ours; its lines after the first name the files of the set.
 pub const MARKER: &str = ".thornmap-report";
@@ -76,6 +80,10 @@ pub enum Detail {
 pub struct RenderOptions {
     /// Which channels `survey.json` lists.
     pub detail: Detail,
+    /// Whether `report.md` is in the set.
+    pub markdown: bool,
+    /// Whether each plot is in the set as PNG too.
+    pub png: bool,
 }
 
 /// One file of a report set.
@@ -95,32 +103,17 @@ pub struct ReportSet {
 }
 
 impl ReportSet {
+    /// Adds a file, and its name to the marker: a later set removes it with the others.
+    pub fn add(&mut self, file: ReportFile) {
+        if let Some(marker) = self.files.iter_mut().find(|other| other.path == MARKER) {
+            marker.bytes.extend_from_slice(format!("{}\n", file.path).as_bytes());
+        }
+        self.files.push(file);
+    }
+
     /// Returns the content of a file of the set, or `None` when the set has no such file.
     #[must_use]
     pub fn get(&self, path: &str) -> Option<&[u8]> {
         self.files.iter().find(|file| file.path == path).map(|file| file.bytes.as_slice())
     }
-}
-
-/// Returns the report set of a survey: `report.html`, `channels.csv`, `survey.json`, `plots/*.svg` and the marker.
-///
-/// The same result gives the same bytes on every machine: no clock, no hash order, rounded figures.
-///
-/// # Errors
-/// `NotFinite` where a figure is NaN or infinite, with its key; `Serialize`, `Csv`, `Plot` and `Page` where a writer
-/// itself fails.
-pub fn render(result: &SurveyResult, options: &RenderOptions) -> Result<ReportSet, ReportError> {
-    let mut files = vec![
-        ReportFile { path: "survey.json".into(), bytes: survey_json(result, options)?.into_bytes() },
-        ReportFile { path: "channels.csv".into(), bytes: channels_csv(&result.channels)? },
-    ];
-    files.extend(document::document(result, options)?);
-    files.sort_by(|a, b| a.path.cmp(&b.path));
-    let mut marker = format!("{MARKER_HEAD}\n");
-    for file in &files {
-        marker.push_str(&file.path);
-        marker.push('\n');
-    }
-    files.push(ReportFile { path: MARKER.into(), bytes: marker.into_bytes() });
-    Ok(ReportSet { files })
 }

@@ -68,14 +68,20 @@ pub(crate) fn class_of(token: (u8, u8, u8)) -> &'static str {
     TABLE.get(usize::from(token.0)).map_or("ink", |row| row.1)
 }
 
-/// Returns the rules for every class, as used inside each plot file and once in the page.
-pub(crate) fn plot_css() -> String {
+/// Returns the rules for every class on light paper.
+pub(crate) fn plain_css() -> String {
     let mut css = String::from(
         ".plot{font-family:\"DejaVu Sans\",Verdana,\"Segoe UI\",system-ui,sans-serif}.plot path{stroke-linejoin:round}",
     );
     for (_, class, light, _, more) in TABLE {
         css.push_str(&format!(".f-{class}{{fill:{light}}}.s-{class}{{fill:none;stroke:{light};{more}}}"));
     }
+    css
+}
+
+/// Returns the rules for every class, light and dark, as used inside each plot file and once in the page.
+pub(crate) fn plot_css() -> String {
+    let mut css = plain_css();
     css.push_str("@media screen and (prefers-color-scheme:dark){");
     for (_, class, _, dark, _) in TABLE {
         css.push_str(&format!(".f-{class}{{fill:{dark}}}.s-{class}{{stroke:{dark}}}"));

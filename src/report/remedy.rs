@@ -5,7 +5,7 @@ use serde_json::{Value, json};
 
 use super::columns::inert;
 use super::json::json_text;
-use super::page::policy;
+use super::policy::policy;
 use super::{ReportError, ReportFile};
 use crate::assess::{ChannelResult, Tone};
 use crate::base::Assumption;
@@ -91,7 +91,7 @@ fn summary(remedy: &Remedy) -> String {
 }
 
 /// Returns the set and its certificate, in sentences.
-fn set_sentences(plan: &Plan, set: &SettingSet) -> Vec<String> {
+pub(super) fn set_sentences(plan: &Plan, set: &SettingSet) -> Vec<String> {
     let names: Vec<String> = set
         .cover
         .members
@@ -362,7 +362,7 @@ fn map_rows(plan: &Plan, set: &SettingSet) -> Vec<[String; 4]> {
 fn page(plan: &Plan, remedy: &Remedy) -> Result<String, ReportError> {
     let css = include_str!("templates/report.css").replace('\r', "");
     let page = Page {
-        policy: policy(&css),
+        policy: policy(&css, None),
         title: &plan.identity.title,
         summary: summary(remedy),
         patients: remedy.channels.iter().map(patient).collect(),

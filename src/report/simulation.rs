@@ -108,8 +108,9 @@ pub fn settling_text(plan: &Plan, found: &Settling) -> String {
         || "does not settle in the time simulated".to_owned(),
         |s| format!("stays within it after {}", with_prefix(s, "s", 5)),
     );
+    let linear = found.linear_settled_after_s.map_or_else(|| "unknown".to_owned(), |s| with_prefix(s, "s", 5));
     format!(
-        "{}: channel {} reached from {} {} (noise sources and modulator off)\ntolerance {} at the output: {settled}\ncomparison cycles lost on the way: {}\n",
+        "{}: channel {} reached from {} {} (noise sources and modulator off)\ntolerance {} at the output: {settled}\ncontinuous linear loop, closed form: {linear}\ncomparison cycles lost on the way: {}\n",
         plan.identity.title,
         found.channel,
         with_prefix(found.step_hz.abs(), "Hz", 6),
@@ -126,6 +127,7 @@ pub fn settling_text(plan: &Plan, found: &Settling) -> String {
 pub fn settling_json(plan: &Plan, found: &Settling, assumptions: &[Assumption]) -> Result<String, ReportError> {
     // About a thousand samples tell the way.
     let every = found.samples.len().div_ceil(1000).max(1);
+    let linear_hz = |i: usize| found.linear_hz.get(i).copied();
     let document = json!({
         "schema": "thornmap.settling/1",
         "version": env!("CARGO_PKG_VERSION"),
@@ -134,9 +136,11 @@ pub fn settling_json(plan: &Plan, found: &Settling, assumptions: &[Assumption]) 
         "step_hz": found.step_hz,
         "tolerance_hz": found.tolerance_hz,
         "settled_after_s": found.settled_after_s,
+        "linear_settled_after_s": found.linear_settled_after_s,
         "slips": found.slips.abs(),
-        "samples": found.samples.iter().step_by(every).map(|(time_s, frequency_hz, phase_deg)| json!({
+        "samples": found.samples.iter().enumerate().step_by(every).map(|(i, (time_s, frequency_hz, phase_deg))| json!({
             "time_s": time_s, "frequency_error_hz": frequency_hz, "phase_error_deg": phase_deg,
+            "linear_frequency_error_hz": linear_hz(i),
         })).collect::<Vec<_>>(),
         "assumptions": assumptions,
     });

@@ -219,12 +219,16 @@ pub(crate) fn picture(size: (u32, u32), id: &str, title: &str, description: &str
 
 /// Returns the picture as a file of its own: with its size, its colours and a sheet of paper behind it.
 pub(crate) fn standalone(size: (u32, u32), picture: &str) -> String {
+    let dark = "@media screen and (prefers-color-scheme:dark){.paper{fill:#14191c}}";
+    on_paper(size, picture, &format!("{}{dark}", plot_css()))
+}
+
+/// Returns the picture with its size, the given colours and a sheet of light paper behind it.
+pub(crate) fn on_paper(size: (u32, u32), picture: &str, css: &str) -> String {
     let (wide, high) = size;
     let head = format!("<svg width=\"{wide}\" height=\"{high}\" ");
     let sheet = format!(
-        "<style>.paper{{fill:#fdfcf9}}{}@media screen and (prefers-color-scheme:dark){{.paper{{fill:#14191c}}}}</style>\n\
-         <path class=\"paper\" d=\"M0 0h{wide}v{high}h-{wide}z\"/>\n",
-        plot_css()
+        "<style>.paper{{fill:#fdfcf9}}{css}</style>\n<path class=\"paper\" d=\"M0 0h{wide}v{high}h-{wide}z\"/>\n"
     );
     picture.replacen("<svg ", &head, 1).replacen("</desc>\n", &format!("</desc>\n{sheet}"), 1)
 }

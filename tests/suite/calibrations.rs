@@ -107,8 +107,13 @@ fn what_the_rows_do_not_tell_stays_as_planned() {
     let rows: Vec<Measured> = true_rows(&plan("\"-45 dBc\"", "\"0.001 %\"")).into_iter().step_by(2).collect();
     let found = calibrate(&believed, &rows).unwrap();
     assert_eq!(found.fitted.len(), 1);
-    assert!(found.not_fitted.iter().any(|why| why.contains("detector.mismatch: no measured tone depends on it")));
-    assert!(found.covered.iter().any(|sentence| sentence.starts_with("channels 1.699953 GHz to 1.700047 GHz")));
+    assert!(
+        found
+            .not_fitted
+            .iter()
+            .any(|why| why.contains("detector.mismatch: at its planned value no measured tone depends on it"))
+    );
+    assert!(found.covered.iter().any(|sentence| sentence == "8 rows, channels 1.699953 GHz to 1.700047 GHz"));
     // A row where nothing is predicted is named, not used.
     let mut stray = rows;
     stray[0].offset = thornmap::base::Frequency::from_whole_hz(123_456);
@@ -184,24 +189,134 @@ fn the_command_writes_a_plan_that_check_accepts() {
     assert!(String::from_utf8_lossy(&output.stderr).contains("column level: missing"));
 }
 
+/// The plan with its single mismatch and an offset current, and the anchor's text replaced.
+fn offset_plan(offset: &str, mismatch: &str) -> Plan {
+    let text = text("\"-150 dBc\"", &format!("\"{mismatch}\"")).replace("leakage =", &format!("{offset}\nleakage ="));
+    parse_plan(&text, "bench", &|_| Err("none".to_owned())).unwrap()
+}
+
 #[test]
 fn an_offset_current_is_fitted_where_the_rows_tell_it() {
-    // Order 3, offset a good part of the way to the clear side, where the tone falls steeply with it. No coupling: either
-    // the current is fitted, or it is said that the rows cannot tell it from the mismatch; the rows are met both ways.
-    let with = |current: &str| {
-        let text =
-            text("\"-150 dBc\"", "\"3 %\"").replace("leakage =", &format!("offset_current = \"{current}\"\nleakage ="));
+    // Order 3, offset a good part of the way to the clear side, where the tone falls steeply and in no straight line.
+    let rows = true_rows(&offset_plan("offset_current = \"31 uA\"", "3 %"));
+    for (start, mismatch) in [("30 uA", "2 %"), ("29 uA", "4 %"), ("31 uA", "3 %")] {
+        let found = calibrate(&offset_plan(&format!("offset_current = \"{start}\""), mismatch), &rows).unwrap();
+        let figure = |key: &str| found.fitted.iter().find(|figure| figure.key == key).expect(key);
+        let (current, share) = (figure("detector.offset_current"), figure("detector.mismatch"));
+        assert!((current.fitted / 31e-6 - 1.0).abs() < 1e-3, "{start}: {current:?}");
+        assert!((share.fitted / 0.03 - 1.0).abs() < 3e-3, "{start}: {share:?}");
+        for (figure, truth) in [(current, 31e-6), (share, 0.03)] {
+            assert!(figure.interval.0 < truth && truth < figure.interval.1, "{start}: {figure:?}");
+            assert!(figure.interval.1 - figure.interval.0 > 1e-4 * truth, "no width: {figure:?}");
+        }
+        for row in found.rows.iter().filter(|row| row.unused.is_none()) {
+            assert!((row.fitted_dbc.unwrap() - row.measured_dbc).abs() < 0.02, "{row:?}");
+        }
+    }
+}
+
+#[test]
+fn an_offset_given_as_a_time_is_written_as_the_current_that_was_fitted() {
+    let folder = tempfile::TempDir::new().unwrap();
+    // 0.75 ns at 20 MHz of 2 mA is 30 uA.
+    let believed = text("\"-150 dBc\"", "\"2 %\"").replace("leakage =", "offset_time = \"0.75 ns\" # bleed\nleakage =");
+    fs::write(folder.path().join("bench.toml"), &believed).unwrap();
+    let mut table = String::from("channel,offset,level\n");
+    for row in true_rows(&offset_plan("offset_current = \"31 uA\"", "3 %")) {
+        writeln!(table, "{},{},{} dBc", row.channel, row.offset, row.level_dbc).unwrap();
+    }
+    fs::write(folder.path().join("seen.csv"), table).unwrap();
+    let run = |arguments: &[&str]| {
+        assert_cmd::Command::cargo_bin("thornmap").unwrap().current_dir(folder.path()).args(arguments).output().unwrap()
+    };
+    // The plan read is never the plan written.
+    let output = run(&["calibrate", "bench.toml", "seen.csv", "--write-plan", "./bench.toml"]);
+    assert_eq!(output.status.code(), Some(2));
+    assert!(String::from_utf8_lossy(&output.stderr).contains("is one of the files read"));
+    assert_eq!(fs::read_to_string(folder.path().join("bench.toml")).unwrap(), believed);
+    let output = run(&["calibrate", "bench.toml", "seen.csv", "--write-plan", "after.toml"]);
+    assert_eq!(output.status.code(), Some(0), "{}", String::from_utf8_lossy(&output.stderr));
+    assert!(String::from_utf8_lossy(&output.stderr).contains("places with a fitted figure: 2"));
+    let after = fs::read_to_string(folder.path().join("after.toml")).unwrap();
+    assert!(!after.contains("offset_time") && after.contains("# bleed"), "{after}");
+    let plan = parse_plan(&after, "after", &|_| Err("none".to_owned())).unwrap();
+    assert!((plan.detector.offset_current_a / 31e-6 - 1.0).abs() < 1e-3, "{}", plan.detector.offset_current_a);
+}
+
+#[test]
+fn anchors_of_one_coupling_are_fitted_and_written_as_one() {
+    let second = "[[anchor]]\nmechanism = \"detector\"\nlevel = \"-46 dBc\" # second board\noffset = \"50 kHz\"\nroll_off = \"40 dB\"\n[[channels]]";
+    let two = text("\"-50 dBc\"", "\"2 %\"").replace("[[channels]]", second);
+    let believed = parse_plan(&two, "bench", &|_| Err("none".to_owned())).unwrap();
+    let rows = true_rows(&plan("\"-45 dBc\"", "\"3 %\""));
+    let found = calibrate(&believed, &rows).unwrap();
+    let coupling = &found.fitted[0];
+    assert_eq!(coupling.key, "anchors 1, 2 as one coupling, level");
+    assert!((coupling.fitted + 45.0).abs() < 0.05, "{coupling:?}");
+    assert_eq!(coupling.places.len(), 2);
+    assert!(!found.not_fitted.iter().any(|why| why.contains("anchor 2")), "{:?}", found.not_fitted);
+    // Both are written, each with what the one coupling gives where it was taken: read again, they agree.
+    let written = thornmap::report::calibrated_plan(&two, &found);
+    assert_eq!((written.written, written.missed.len()), (3, 0));
+    let after = parse_plan(&written.text, "after", &|_| Err("none".to_owned())).unwrap();
+    let setup = Setup::new(&after).unwrap();
+    assert_eq!(setup.anchors().len(), 1);
+    assert!((setup.anchors()[0].level_dbc + 45.0).abs() < 0.05);
+    assert!(!setup.warnings().iter().any(|warning| warning.contains("do not agree")), "{:?}", setup.warnings());
+    let again = calibrate(&after, &rows).unwrap();
+    assert!(again.rows.iter().all(|row| row.residual_db.unwrap().abs() < 0.05));
+}
+
+#[test]
+fn a_row_of_which_a_part_is_unknown_is_not_used() {
+    // Without an anchor the whole of the tone would be taken for mismatch: 2 % for a true 2 % and a coupling.
+    let whole = text("\"-45 dBc\"", "\"2 %\"");
+    let rows = true_rows(&parse_plan(&whole, "bench", &|_| Err("none".to_owned())).unwrap());
+    let start = whole.find("[[anchor]]").unwrap();
+    let end = whole.find("[[channels]]").unwrap();
+    let without = format!("{}{}", &whole[..start], &whole[end..]);
+    let found = calibrate(&parse_plan(&without, "bench", &|_| Err("none".to_owned())).unwrap(), &rows).unwrap();
+    assert!(found.fitted.is_empty(), "{:?}", found.fitted);
+    for row in &found.rows {
+        let why = row.unused.as_ref().unwrap();
+        assert!(why.contains("coupling: no anchor for q = 1") && why.contains("[[anchor]]"), "{why}");
+        assert_eq!((row.predicted_dbc, row.fitted_dbc), (None, None));
+    }
+}
+
+#[test]
+fn a_roll_off_is_fitted_where_harmonics_show_it() {
+    // Small mismatch, so that the harmonics are the coupling's own.
+    let with = |level: &str, roll_off: &str| {
+        let text = text(level, "\"0.01 %\"").replace("roll_off = \"40 dB\"", roll_off);
         parse_plan(&text, "bench", &|_| Err("none".to_owned())).unwrap()
     };
-    let rows = true_rows(&with("31 uA"));
-    let found = calibrate(&with("30 uA"), &rows).unwrap();
-    let names: Vec<&str> = found.fitted.iter().map(|figure| figure.key.as_str()).collect();
-    assert!(
-        names.contains(&"detector.offset_current")
-            || found.not_fitted.iter().any(|why| why.contains("detector.offset_current: the rows cannot tell it from")),
-        "{found:?}"
-    );
-    for row in found.rows.iter().filter(|row| row.unused.is_none()) {
-        assert!((row.fitted_dbc.unwrap() - row.measured_dbc).abs() < 0.3, "{row:?}");
-    }
+    let rows = true_rows(&with("\"-45 dBc\"", "roll_off = \"7 dB\""));
+    let found = calibrate(&with("\"-50 dBc\"", ""), &rows).unwrap();
+    let named = |key: &str| found.fitted.iter().find(|figure| figure.key == key).expect(key);
+    let (level, roll_off) = (named("anchor 1 level"), named("anchor 1 roll-off"));
+    assert!((level.fitted + 45.0).abs() < 0.05, "{level:?}");
+    assert!((roll_off.fitted - 7.0).abs() < 0.05 && roll_off.planned == 0.0, "{roll_off:?}");
+    assert!(roll_off.covered[0].starts_with("8 rows"), "only the harmonics tell it: {:?}", roll_off.covered);
+    assert!(level.covered[0].starts_with("16 rows"), "{:?}", level.covered);
+}
+
+#[test]
+fn couplings_of_two_boundaries_are_fitted_apart() {
+    // Four channels near a whole multiple, four near a half: each coupling is told by its own.
+    let with = |first: &str, second: &str| {
+        let text = text(&format!("\"{first} dBc\""), "\"0.01 %\"").replace("largest_q = 1", "largest_q = 2").replace(
+            "[[channels]]",
+            &format!("[[anchor]]\nmechanism = \"detector\"\nq = 2\nlevel = \"{second} dBc\"\noffset = \"50 kHz\"\n[[channels]]"),
+        );
+        let text = ["1.699953", "1.699971", "1.700031", "1.700047"].iter().fold(text, |text, channel| {
+            text.replace(channel, &channel.replace("1.70", "1.71").replace("1.699", "1.709"))
+        });
+        parse_plan(&text, "bench", &|_| Err("none".to_owned())).unwrap()
+    };
+    let rows = true_rows(&with("-45", "-60"));
+    let found = calibrate(&with("-50", "-57"), &rows).unwrap();
+    let named = |key: &str| found.fitted.iter().find(|figure| figure.key == key).expect(key);
+    assert!((named("anchor 1 level").fitted + 45.0).abs() < 0.05, "{found:?}");
+    assert!((named("anchor 2 level").fitted + 60.0).abs() < 0.05, "{found:?}");
 }

@@ -25,7 +25,7 @@ fn demo_text() -> String {
 
 fn survey_text(plan: &str, detail: Detail) -> String {
     let plan = parse_plan(plan, "demo", &|_| Err("none".to_owned())).unwrap();
-    survey_json(&survey(&plan, &|_| {}).unwrap(), &RenderOptions { detail }).unwrap()
+    survey_json(&survey(&plan, &|_| {}).unwrap(), &RenderOptions { detail, ..RenderOptions::default() }).unwrap()
 }
 
 fn surveyed(plan: &str) -> SurveyFile {

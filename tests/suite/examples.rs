@@ -1,22 +1,19 @@
-//! The committed example report is what the program writes today.
+//! The committed example reports are what the program writes today.
 //!
-//! `THORNMAP_UPDATE=1 cargo test --test suite examples` rewrites it.
+//! `THORNMAP_UPDATE=1 cargo test --test suite examples` rewrites them.
 
 use std::fs;
 use std::path::PathBuf;
 
 use serde_json::Value;
-use thornmap::plan::demo_plan;
-use thornmap::report::{RenderOptions, render, write_set};
+use thornmap::decide::dossier::dossier;
+use thornmap::plan::{Plan, demo_plan, parse_plan};
+use thornmap::report::{RenderOptions, render_with, write_set};
 use thornmap::survey::survey;
 
 /// Figures of different machines agree to this share; levels to this many decibels.
 const RELATIVE: f64 = 1e-6;
 const ABSOLUTE: f64 = 2e-3;
-
-fn folder() -> PathBuf {
-    PathBuf::from(env!("CARGO_MANIFEST_DIR")).join("reports/demo")
-}
 
 /// Compares two JSON values, figures with tolerance; returns how many figures were compared.
 fn compare(path: &str, ours: &Value, theirs: &Value) -> usize {
@@ -58,21 +55,23 @@ fn without_figures(bytes: &[u8]) -> String {
     out
 }
 
-#[test]
-fn the_committed_demo_report_is_current() {
-    let result = survey(&demo_plan(), &|_| {}).unwrap();
-    let set = render(&result, &RenderOptions::default()).unwrap();
+/// Holds a committed example against what the program writes; returns how many figures were compared.
+fn check(plan: &Plan) -> usize {
+    let folder = PathBuf::from(env!("CARGO_MANIFEST_DIR")).join("reports").join(&plan.stem);
+    let result = survey(plan, &|_| {}).unwrap();
+    let made = dossier(&result, &|| {}).unwrap();
+    let set = render_with(&result, &made, &RenderOptions::default()).unwrap();
     if std::env::var_os("THORNMAP_UPDATE").is_some() {
-        write_set(&folder(), &set).unwrap();
+        write_set(&folder, &set).unwrap();
     }
-    let mut files = 0;
+    let (mut files, mut figures) = (0, 0);
     for file in &set.files {
-        let committed = fs::read(folder().join(&file.path)).unwrap();
+        let committed = fs::read(folder.join(&file.path)).unwrap();
         files += 1;
         if file.path == "survey.json" {
             let ours: Value = serde_json::from_slice(&file.bytes).unwrap();
             let theirs: Value = serde_json::from_slice(&committed).unwrap();
-            assert!(compare("survey", &ours, &theirs) > 20_000);
+            figures = compare("survey", &ours, &theirs);
         } else if file.path == "report.html" {
             assert!(without_figures(&file.bytes) == without_figures(&committed), "the words of report.html changed");
         } else {
@@ -81,5 +80,26 @@ fn the_committed_demo_report_is_current() {
             assert_eq!(lines(&file.bytes), lines(&committed), "{}", file.path);
         }
     }
-    assert_eq!(files, 8);
+    assert_eq!(files, 10, "page, data, six plots, marker");
+    figures
+}
+
+fn config(stem: &str) -> Plan {
+    let path = PathBuf::from(env!("CARGO_MANIFEST_DIR")).join("configs").join(format!("{stem}.toml"));
+    parse_plan(&fs::read_to_string(path).unwrap(), stem, &|name| Err(format!("no file {name}"))).unwrap()
+}
+
+#[test]
+fn the_committed_demo_report_is_current() {
+    assert!(check(&demo_plan()) > 20_000);
+}
+
+#[test]
+fn the_committed_report_of_wide_dividers_is_current() {
+    assert!(check(&config("wide_dividers")) > 5_000);
+}
+
+#[test]
+fn the_committed_report_of_an_exact_modulus_is_current() {
+    assert!(check(&config("exact_modulus")) > 1_000);
 }

@@ -22,5 +22,6 @@ mod simulations;
 mod spectra;
 mod surveys;
 mod tree;
+mod tuned;
 mod verdicts;
 mod victims;

@@ -4,14 +4,15 @@
 
 mod fixture;
 mod page;
+mod signed;
 mod writing;
 
 use serde_json::Value;
 use thornmap::report::{COLUMNS, Detail, RenderOptions, ReportError, ReportSet, render};
 use thornmap::survey::SurveyResult;
 
-const ALL: RenderOptions = RenderOptions { detail: Detail::All };
-const FLAGGED: RenderOptions = RenderOptions { detail: Detail::Flagged };
+const ALL: RenderOptions = RenderOptions { detail: Detail::All, markdown: false, png: false };
+const FLAGGED: RenderOptions = RenderOptions { detail: Detail::Flagged, markdown: false, png: false };
 
 fn text(set: &ReportSet, path: &str) -> String {
     String::from_utf8(set.get(path).unwrap_or_else(|| panic!("{path} is in the set")).to_vec()).unwrap()

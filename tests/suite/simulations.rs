@@ -7,7 +7,7 @@ use rand::{RngExt, SeedableRng};
 use rayon::prelude::*;
 use thornmap::loop_model::{
     FilterComponents, FilterDesign, FilterNetwork, LoopPoint, LoopResponse, SimulatedDetector, Simulation,
-    SimulationInput, reference_tone_dbc,
+    SimulationInput, StepResponse, reference_tone_dbc,
 };
 use thornmap::modulator::{Dither, ModulatorConfig, ModulatorSettings, Modulus, Structure, phase_numerators, start};
 use thornmap::spectrum::{Window, correlate, sideband_dbc};
@@ -206,11 +206,19 @@ fn settling_agrees_with_the_step_response_of_scipy() {
             start_phase_cycles: 0.0,
         };
         let samples = Simulation::new(input, Box::new(|| 0.0)).unwrap().transient(80 * 40).unwrap();
+        let linear = StepResponse::new(&network, number(&data["current"]), number(&data["gain"]), divider).unwrap();
         for (i, wanted) in case["error"].as_array().unwrap().iter().enumerate() {
             let seen = samples[i * 40].frequency_hz / -1e4;
             assert!((seen - number(wanted)).abs() < 0.02, "{i} us: {seen} against {wanted}");
+            let closed = linear.error_at(i as f64 * number(&data["step_s"]));
+            assert!((closed - number(wanted)).abs() < 1e-6, "{i} us, closed form: {closed} against {wanted}");
             checked += 1;
         }
+        // The closed form settles where the simulation does, to one comparison cycle.
+        let last = samples.iter().rposition(|sample| sample.frequency_hz.abs() > 10.0).unwrap();
+        let settled_s = linear.settled_after_s(1e-3);
+        assert!((settled_s / samples[last + 1].time_s - 1.0).abs() < 0.02, "{settled_s}");
+        assert!(linear.error_at(settled_s).abs() <= 1e-3 && linear.settled_after_s(2.0) == 0.0);
     }
     assert_eq!(checked, 3 * 81);
 }
@@ -246,6 +254,9 @@ fn the_command_compares_and_settles() {
     assert_eq!(found["schema"], "thornmap.settling/1");
     let settled_s = found["settled_after_s"].as_f64().unwrap();
     assert!(settled_s > 20e-6 && settled_s < 200e-6, "{settled_s}");
+    let linear_s = found["linear_settled_after_s"].as_f64().unwrap();
+    assert!((linear_s / settled_s - 1.0).abs() < 0.1, "no slips at 5 MHz: {linear_s} against {settled_s}");
+    assert!(found["samples"][5]["linear_frequency_error_hz"].is_f64());
     assert!(folder.path().join("set/settling.svg").exists());
     for (arguments, said) in [
         (vec!["440.5 MHz", "--step", "0 Hz"], "settles at once"),

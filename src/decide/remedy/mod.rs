@@ -23,7 +23,7 @@ use serde::Serialize;
 use crate::assess::{AssessError, ChannelResult, Setup, Verdict};
 use crate::base::{Assumption, Frequency};
 use crate::plan::Plan;
-use crate::survey::survey;
+use crate::survey::{SurveyResult, survey};
 
 use cures::Patients;
 
@@ -116,8 +116,21 @@ pub fn remedy(
     criterion: Criterion,
     done: &(dyn Fn() + Sync),
 ) -> Result<Remedy, AssessError> {
+    remedy_of(&survey(plan, &|_| {})?, costs, criterion, done)
+}
+
+/// Returns the remedies of a surveyed plan; otherwise as [`remedy`].
+///
+/// # Errors
+/// As [`remedy`].
+pub fn remedy_of(
+    surveyed: &SurveyResult,
+    costs: &Costs,
+    criterion: Criterion,
+    done: &(dyn Fn() + Sync),
+) -> Result<Remedy, AssessError> {
+    let plan = &surveyed.plan;
     let board = Setup::new(plan)?;
-    let surveyed = survey(plan, &|_| {})?;
     let flagged: Vec<&ChannelResult> =
         surveyed.channels.iter().filter(|channel| channel.verdict != Verdict::Clear).collect();
     let patients = Patients { plan, board: &board, costs, flagged };

@@ -1,5 +1,6 @@
 //! One channel's noise budget with its tones, and what an offset current does to it.
 
+use super::Plot;
 use super::frame::{Axis, Frame, Hold, ROOM, Room, plot};
 use crate::assess::{ChannelResult, OffsetSweep};
 use crate::base::db_from_power;
@@ -14,6 +15,11 @@ const PAINTS: [Paint; 4] = [Paint::Sequence, Paint::Clear, Paint::Marginal, Pain
 
 /// Returns the noise budget as a picture, tones as stems; `None` without any known source.
 pub(crate) fn budget_svg(channel: &ChannelResult, budget: &NoiseBudget) -> Result<Option<String>, ReportError> {
+    Ok(budget_plot(channel, budget)?.map(|plot| plot.file()))
+}
+
+/// Returns the noise budget as a plot of a report; `None` without any known source.
+pub(super) fn budget_plot(channel: &ChannelResult, budget: &NoiseBudget) -> Result<Option<Plot>, ReportError> {
     const NAME: &str = "budget";
     const TITLE: &str = "Noise of the channel at the output, source by source, and its tones";
     let (Some(first), Some(last)) = (budget.offset_hz.first(), budget.offset_hz.last()) else { return Ok(None) };
@@ -81,7 +87,7 @@ pub(crate) fn budget_svg(channel: &ChannelResult, budget: &NoiseBudget) -> Resul
         "Channel {}: each source through the loop, their sum, and the tones (brown: level known, grey: known part only).{missing}",
         channel.channel
     );
-    Ok(Some(plot(NAME, TITLE, caption, HEIGHT, &body).file()))
+    Ok(Some(plot(NAME, TITLE, caption, HEIGHT, &body)))
 }
 
 /// Returns the sweep of the offset current as a picture; `None` where no level is known.

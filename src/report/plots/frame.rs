@@ -304,6 +304,15 @@ impl<'a> Frame<'a> {
         }
     }
 
+    /// Draws the verdict marks with their words, from a place on.
+    pub(super) fn verdict_words(&mut self, (mut x, y): (f64, f64), verdicts: &[Verdict]) {
+        for verdict in verdicts {
+            self.mark((x + 3.0, y + 4.5), *verdict);
+            self.text(verdict.word(), (x + 11.0, y), 11.0, Paint::Faint, Hold::Start);
+            x += 30.0 + 6.6 * verdict.word().chars().count() as f64;
+        }
+    }
+
     /// Ends the drawing.
     pub(super) fn finish(mut self, plot: &'static str) -> Result<(), ReportError> {
         let drawn = self.area.present();

@@ -4,6 +4,7 @@ mod boundaries;
 mod channel;
 mod frame;
 mod margins;
+mod options;
 mod sequence;
 mod simulation;
 mod spectrum;
@@ -14,8 +15,9 @@ pub(crate) use sequence::sequence_svg;
 pub(crate) use simulation::{settling_svg, simulation_svg};
 
 use super::ReportError;
-use super::svg_backend::standalone;
+use super::svg_backend::{on_paper, standalone};
 use crate::assess::Verdict;
+use crate::decide::dossier::Dossier;
 use crate::survey::SurveyResult;
 
 use super::paint::Paint;
@@ -38,15 +40,26 @@ impl Plot {
     pub(crate) fn file(&self) -> String {
         standalone(self.size, &self.svg)
     }
+
+    /// Returns the picture as a file with these colours alone.
+    pub(crate) fn file_with(&self, css: &str) -> String {
+        on_paper(self.size, &self.svg, css)
+    }
 }
 
 /// Returns every plot that the result has figures for, in reading order.
-pub(crate) fn plots(result: &SurveyResult) -> Result<Vec<Plot>, ReportError> {
+pub(crate) fn plots(result: &SurveyResult, dossier: &Dossier) -> Result<Vec<Plot>, ReportError> {
+    let budget = match &dossier.budget {
+        Some((place, budget)) => channel::budget_plot(&result.channels[*place], budget)?,
+        None => None,
+    };
     let drawn = [
         boundaries::boundaries(result)?,
         tone_map::tone_map(result)?,
         spectrum::spectrum(result)?,
         margins::margins(result)?,
+        options::options(dossier.comparison.as_ref())?,
+        budget,
     ];
     Ok(drawn.into_iter().flatten().collect())
 }

@@ -165,6 +165,7 @@ pub fn plan(count: u64) -> Plan {
         analysis: Analysis { record: 131_072, span_hz: 9.6e6, tone_floor_dbc: -120.0, level_uncertainty_db: 0.0 },
         assumptions: Vec::new(),
         basis: BTreeMap::new(),
+        required: Vec::new(),
         warnings: Vec::new(),
         sha256: "5f3c9a".repeat(10) + "0123",
         stem: "petrel".into(),

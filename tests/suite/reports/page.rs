@@ -6,7 +6,7 @@ use thornmap::report::render;
 use super::{ALL, FLAGGED, fixture, json, text, worst_tone};
 
 /// Returns the text of a piece of markup: tags removed, character references undone.
-fn plain(markup: &str) -> String {
+pub(super) fn plain(markup: &str) -> String {
     let mut text = String::new();
     let mut inside = false;
     for c in markup.chars() {
@@ -48,7 +48,7 @@ fn table_rows(html: &str) -> Vec<(u64, u64, Vec<&str>)> {
 }
 
 /// Asserts that a cell shows a level or margin with two decimals; returns whether there was a figure.
-fn assert_decibels(cell: &str, value: &Value) -> bool {
+pub(super) fn assert_decibels(cell: &str, value: &Value) -> bool {
     let Some(value) = value.as_f64() else { return false };
     let shown: f64 = cell.trim_start_matches("≤ ").parse().unwrap_or_else(|_| panic!("{cell} for {value}"));
     // Half a unit of the last place shown, and half a unit of the last place of survey.json.
@@ -56,7 +56,7 @@ fn assert_decibels(cell: &str, value: &Value) -> bool {
     true
 }
 
-fn assert_hertz(cell: &str, hz: f64) {
+pub(super) fn assert_hertz(cell: &str, hz: f64) {
     let (number, unit) = cell.trim().split_once(' ').unwrap_or_else(|| panic!("{cell} for {hz}"));
     let scale = match unit {
         "Hz" => 1.0,
@@ -164,7 +164,9 @@ fn hostile_text_stays_text() {
     let set = render(&result, &ALL).unwrap();
     for file in set.files.iter().filter(|file| file.path.ends_with(".html") || file.path.ends_with(".svg")) {
         let text = std::str::from_utf8(&file.bytes).unwrap();
-        assert!(!text.contains("<script"), "{}", file.path);
+        // The page has one script of its own, an SVG none.
+        assert_eq!(text.matches("<script").count(), usize::from(file.path == "report.html"), "{}", file.path);
+        assert_eq!(text.matches("</script").count(), usize::from(file.path == "report.html"), "{}", file.path);
         assert!(!text.contains("<img"), "{}", file.path);
         assert_eq!(text.matches("<style").count(), text.matches("</style>").count(), "{}", file.path);
         assert_eq!(text.matches("<style").count(), 1, "{}", file.path);
@@ -173,36 +175,37 @@ fn hostile_text_stays_text() {
     assert!(html.contains("{{ 7*7 }}") && !html.contains(" 49 "), "the template language is not run on user text");
 }
 
+/// Decodes base 64 letter by letter: the other direction of what the page did.
+fn decoded(hash: &str) -> Vec<u8> {
+    let letters = "ABCDEFGHIJKLMNOPQRSTUVWXYZabcdefghijklmnopqrstuvwxyz0123456789+/";
+    let bits: String =
+        hash.trim_end_matches('=').chars().map(|c| format!("{:06b}", letters.find(c).unwrap())).collect();
+    (0..32).map(|byte| u8::from_str_radix(&bits[8 * byte..8 * byte + 8], 2).unwrap()).collect()
+}
+
 #[test]
-fn the_page_is_closed_to_everything_but_its_own_style() {
+fn the_page_is_closed_to_everything_but_its_own_style_and_script() {
     let html = text(&render(&fixture::survey(12), &ALL).unwrap(), "report.html");
-    for opening in [
-        " src=",
-        " href=",
-        "url(",
-        "@import",
-        " style=",
-        " onload",
-        " onclick",
-        "<link",
-        "<iframe",
-        "http-equiv=\"refresh",
-    ] {
+    for opening in
+        [" src=", "url(", "@import", " style=", " onload", " onclick", "<link", "<iframe", "http-equiv=\"refresh"]
+    {
         assert!(!html.replace("src=x onerror", "").contains(opening), "{opening}");
     }
     let rest = html.replace("xmlns=\"http://www.w3.org/2000/svg\"", "");
     assert!(!rest.contains("http://") && !rest.contains("https://"));
+    // Links lead to places of the page alone.
+    assert_eq!(html.matches(" href=").count(), html.matches(" href=\"#").count());
     let style = html.split_once("<style>").unwrap().1.split_once("</style>").unwrap().0;
+    let script = html.split_once("<script>").unwrap().1.split_once("</script>").unwrap().0;
     let policy = html.split_once("Content-Security-Policy\" content=\"").unwrap().1.split_once('"').unwrap().0;
     let policy = plain(policy);
-    let hash = policy.split_once("'sha256-").unwrap().1.split_once('\'').unwrap().0.to_owned();
-    let digest = <sha2::Sha256 as sha2::Digest>::digest(style.as_bytes());
-    // Decoded letter by letter: the other direction of what the page did.
-    let letters = "ABCDEFGHIJKLMNOPQRSTUVWXYZabcdefghijklmnopqrstuvwxyz0123456789+/";
-    let bits: String =
-        hash.trim_end_matches('=').chars().map(|c| format!("{:06b}", letters.find(c).unwrap())).collect();
-    let bytes: Vec<u8> = (0..32).map(|byte| u8::from_str_radix(&bits[8 * byte..8 * byte + 8], 2).unwrap()).collect();
-    assert_eq!(bytes, digest.to_vec());
+    for (what, content) in [("style-src", style), ("script-src", script)] {
+        let rule = policy.split_once(what).unwrap().1.split_once(';').unwrap().0;
+        assert_eq!(rule.matches("sha256-").count(), 1, "{policy}");
+        let hash = rule.split_once("'sha256-").unwrap().1.split_once('\'').unwrap().0;
+        assert_eq!(decoded(hash), <sha2::Sha256 as sha2::Digest>::digest(content.as_bytes()).to_vec(), "{what}");
+    }
+    assert!(!policy.contains("unsafe"));
     assert!(policy.starts_with("default-src 'none';"));
 }
 

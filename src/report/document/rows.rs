@@ -2,9 +2,9 @@
 
 use std::cmp::Ordering;
 
-use super::columns::rules_fired;
-use super::figures::{decibel, significant, with_prefix};
 use crate::assess::{ChannelResult, Rule, Tone, Verdict};
+use crate::report::columns::rules_fired;
+use crate::report::figures::{decibel, significant, with_prefix};
 
 /// Longest free text of a table cell, in characters.
 const CELL_CHARS: usize = 160;
@@ -87,7 +87,7 @@ pub(crate) fn row(channel: &ChannelResult, reasons: usize) -> Row {
         offset: shown(&|tone| with_prefix(tone.offset_hz, "Hz", 6)),
         level: shown(&level_text),
         known: tone.and_then(known_text),
-        limit: shown(&|tone| tone.limit_dbc.map_or_else(|| "none".to_owned(), decibel)),
+        limit: shown(&limit_text),
         margin: shown(&margin_text),
         phase: phase_text(channel),
         rules: rules_text(channel),
@@ -103,7 +103,7 @@ pub(crate) fn row(channel: &ChannelResult, reasons: usize) -> Row {
 }
 
 /// Returns the rules that fired, with how often: `B2 ×5 M2`.
-fn rules_text(channel: &ChannelResult) -> String {
+pub(super) fn rules_text(channel: &ChannelResult) -> String {
     let shown = |(rule, often): (Rule, usize)| match often {
         1 => rule.name().to_owned(),
         _ => format!("{} ×{often}", rule.name()),
@@ -119,7 +119,7 @@ fn word_text(channel: &ChannelResult) -> String {
     }
 }
 
-fn boundary_text(channel: &ChannelResult) -> String {
+pub(super) fn boundary_text(channel: &ChannelResult) -> String {
     match &channel.boundary {
         None => "–".to_owned(),
         Some(near) => {
@@ -129,17 +129,21 @@ fn boundary_text(channel: &ChannelResult) -> String {
     }
 }
 
-fn level_text(tone: &Tone) -> String {
+pub(super) fn level_text(tone: &Tone) -> String {
     tone.level_dbc.map_or_else(|| UNKNOWN.to_owned(), decibel)
 }
 
+pub(super) fn limit_text(tone: &Tone) -> String {
+    tone.limit_dbc.map_or_else(|| "none".to_owned(), decibel)
+}
+
 /// Returns the known part of a level that is not known in full.
-fn known_text(tone: &Tone) -> Option<String> {
+pub(super) fn known_text(tone: &Tone) -> Option<String> {
     tone.known_level_dbc.filter(|_| tone.level_dbc.is_none()).map(decibel)
 }
 
 /// A margin of the known part only bounds the true one: more level can only take margin away.
-fn margin_text(tone: &Tone) -> String {
+pub(super) fn margin_text(tone: &Tone) -> String {
     match (tone.margin_db, tone.level_dbc) {
         (Some(margin), Some(_)) => decibel(margin),
         (Some(margin), None) => format!("≤ {}", decibel(margin)),
