@@ -3,7 +3,7 @@
 use num_complex::Complex64;
 use num_traits::ToPrimitive;
 
-use crate::modulator::{ModulatorConfig, ModulatorError, Period, phase_numerators, start, transient};
+use crate::modulator::{ModulatorConfig, ModulatorError, Period, PhaseRun};
 use crate::spectrum::{Density, DensitySettings, FftScratch, FftStage, SpectrumError, Window, correlate_each};
 use crate::tones::{
     Charge, CurveError, FamilyTone, FoldedNoise, LONGEST_LATTICE, PhaseDensity, lattice_is_short, level_uncertainty_db,
@@ -13,12 +13,13 @@ use crate::tones::{
 use super::curve_point::CurvePoint;
 use super::result::Method;
 
+/// Cycles generated at a time: stay in the first-level cache.
+const BLOCK: usize = 1024;
+
 /// Buffers of one worker; they grow to the record length once.
 #[derive(Debug, Default)]
 pub struct Scratch {
     fft: FftScratch,
-    outputs: Vec<i32>,
-    numerators: Vec<i64>,
     phase_cycles: Vec<f64>,
     excess_cycles: Vec<f64>,
 }
@@ -124,19 +125,20 @@ fn square_line(order: u8, harmonic: u64) -> f64 {
 impl Scratch {
     /// Runs the modulator from its start and leaves ψ of `length` cycles after the transient in `phase_cycles`.
     fn run(&mut self, config: &ModulatorConfig, length: usize) -> Result<(), ModulatorError> {
-        let skipped = transient(config);
-        let total = skipped + length;
-        self.outputs.resize(total, 0);
-        self.numerators.resize(total, 0);
-        start(config).fill(&mut self.outputs);
-        phase_numerators(&self.outputs, config.k(), config.modulus(), &mut self.numerators)?;
+        self.phase_cycles.resize(length, 0.0);
+        let mut run = PhaseRun::new(config)?;
         let scale = 1.0 / config.modulus().get() as f64;
+        if let Some(mean) = run.mean_numerator(length as u64) {
+            for part in self.phase_cycles.chunks_mut(BLOCK) {
+                run.fill(part)?;
+                part.iter_mut().for_each(|phase| *phase = (*phase - mean) * scale);
+            }
+            return Ok(());
+        }
+        run.fill(&mut self.phase_cycles)?;
         let drift = config.mean_shift().to_f64();
-        self.phase_cycles.clear();
-        self.phase_cycles.extend(self.numerators[skipped..].iter().enumerate().map(|(n, numerator)| {
-            // Dither at the first stage moves the mean: φ is counted from the shifted one.
-            *numerator as f64 * scale - drift * n as f64
-        }));
+        // Dither at the first stage moves the mean: φ is counted from the shifted one.
+        self.phase_cycles.iter_mut().enumerate().for_each(|(n, phase)| *phase = *phase * scale - drift * n as f64);
         let mean = self.phase_cycles.iter().sum::<f64>() / length as f64;
         self.phase_cycles.iter_mut().for_each(|phase| *phase -= mean);
         Ok(())

@@ -5,6 +5,9 @@
 
 use super::checked::ModulatorConfig;
 
+/// Highest order.
+const MOST_STAGES: usize = 5;
+
 /// Returns C(top, count) mod modulus for count ≤ 5: the factors of count! are cancelled first, then the rest is
 /// multiplied modulo M, so nothing passes 128 bits.
 ///
@@ -37,21 +40,25 @@ fn product_modulo(a: u64, b: u64, modulus: u64) -> u64 {
     u64::try_from(wide).expect("a residue of a 48-bit modulus")
 }
 
-/// Returns the residues s_1 … s_order after `step` outputs of an undithered MASH.
-pub(super) fn residues_at(config: &ModulatorConfig, step: u128) -> Vec<u64> {
+/// Returns the residues s_1 … s_order after `step` outputs of an undithered MASH; zeros behind them.
+pub(super) fn residues_at(config: &ModulatorConfig, step: u128) -> [u64; MOST_STAGES] {
     let m = config.modulus().get();
+    let mut residues = [0; MOST_STAGES];
     // C(n + a, j) mod M repeats in n with M·j!: 120 = 5! covers every order, and n + 4 cannot overflow any more.
-    let n = if step == 0 { return config.seeds().to_vec() } else { (step - 1) % (u128::from(m) * 120) + 1 };
-    (1..=u32::from(config.order()))
-        .map(|i| {
-            let own = (0..i).map(|j| {
-                let seed = config.seeds()[(i - j - 1) as usize];
-                product_modulo(seed, binomial_modulo(n - 1 + u128::from(j), j, m), m)
-            });
-            let driven = product_modulo(config.k(), binomial_modulo(n + u128::from(i) - 1, i, m), m);
-            own.chain([driven]).fold(0, |sum, term| (sum + term) % m)
-        })
-        .collect()
+    if step == 0 {
+        residues[..config.seeds().len()].copy_from_slice(config.seeds());
+        return residues;
+    }
+    let n = (step - 1) % (u128::from(m) * 120) + 1;
+    for (i, residue) in (1..=u32::from(config.order())).zip(&mut residues) {
+        let own = (0..i).map(|j| {
+            let seed = config.seeds()[(i - j - 1) as usize];
+            product_modulo(seed, binomial_modulo(n - 1 + u128::from(j), j, m), m)
+        });
+        let driven = product_modulo(config.k(), binomial_modulo(n + u128::from(i) - 1, i, m), m);
+        *residue = own.chain([driven]).fold(0, |sum, term| (sum + term) % m);
+    }
+    residues
 }
 
 /// Returns the exact length of the sequence of an undithered MASH (state and output), at any seeds.

@@ -26,7 +26,7 @@ pub fn jump_to(config: &ModulatorConfig, step: u128) -> Result<Box<dyn Modulator
     let history = step.min(u128::from(config.order() - 1));
     let history = usize::try_from(history).expect("at most four");
     let residues = residues_at(config, step - history as u128);
-    let mut modulator = mash::start_at(config, &residues);
+    let mut modulator = mash::start_at(config, &residues[..usize::from(config.order())]);
     modulator.fill(&mut vec![0; history]);
     Ok(modulator)
 }

@@ -89,11 +89,21 @@ pub(super) fn prime_stage(config: &ModulatorConfig) -> PrimeStage {
 /// assert_eq!(phase, [-1, -2, 0, -1]);
 /// ```
 pub fn phase_numerators(outputs: &[i32], k: u64, modulus: Modulus, out: &mut [i64]) -> Result<(), ModulatorError> {
+    add_up(outputs, k, modulus, (0, 0), out)
+}
+
+/// Continues [`phase_numerators`] from a sum after `made` outputs.
+pub(super) fn add_up(
+    outputs: &[i32],
+    k: u64,
+    modulus: Modulus,
+    (mut sum, made): (i64, usize),
+    out: &mut [i64],
+) -> Result<(), ModulatorError> {
     assert_eq!(outputs.len(), out.len(), "one phase for each output");
     let m = i64::try_from(modulus.get()).expect("a modulus is at most 2^48");
-    let overflow = |index| ModulatorError::PhaseOverflow { index, k, modulus: modulus.get() };
+    let overflow = |index| ModulatorError::PhaseOverflow { index: made + index, k, modulus: modulus.get() };
     let step_back = i64::try_from(k).map_err(|_| overflow(0))?;
-    let mut sum = 0i64;
     for (index, (output, phase)) in outputs.iter().zip(out).enumerate() {
         sum = i64::from(*output)
             .checked_mul(m)

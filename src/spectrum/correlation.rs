@@ -3,10 +3,13 @@
 use std::f64::consts::TAU;
 
 use num_complex::Complex64;
+use pulp::{Arch, Simd, WithSimd};
 
 use super::Window;
 use super::oracle::step;
 
+/// Samples that are summed side by side.
+const LANES: usize = 8;
 /// Samples between two fresh phasors; within a block a table of directly computed powers serves, so rounding never grows.
 const RENEWAL: usize = 64;
 
@@ -49,31 +52,58 @@ pub fn correlate_each(samples: &[f64], residues: &[u64], modulus: u64, window: W
     residues.iter().map(|residue| phasor_sum(&weighted, *residue, modulus) / gain).collect()
 }
 
-/// Returns `Σ x[n]·e^{−j2π·n·residue/modulus}`: blocks share one table of powers, each block starts at its exact phase.
+/// Returns `Σ x[n]·e^{−j2π·n·residue/modulus}`.
 fn phasor_sum(samples: &[f64], residue: u64, modulus: u64) -> Complex64 {
     assert!(residue < modulus, "a residue is below its modulus");
-    let turn = |phase: u64| Complex64::cis(-TAU * (phase as f64 / modulus as f64));
-    let mut phase = 0;
-    let mut powers = [Complex64::ZERO; RENEWAL];
-    for power in &mut powers {
-        *power = turn(phase);
-        phase = step(phase, residue, modulus);
-    }
-    let block_step = phase;
-    let mut start = 0;
-    let mut sum = Complex64::ZERO;
-    for block in samples.chunks(RENEWAL) {
-        // Four sums side by side: one alone waits for each addition.
-        let mut lanes = [Complex64::ZERO; 4];
-        for (samples, powers) in block.chunks(4).zip(powers.chunks(4)) {
-            for ((lane, sample), power) in lanes.iter_mut().zip(samples).zip(powers) {
-                *lane += power * sample;
-            }
+    Arch::new().dispatch(PhasorSum { samples, residue, modulus })
+}
+
+/// A sum whose blocks share one table of powers; each block starts at its exact phase. Compiled once for each
+/// instruction set.
+struct PhasorSum<'a> {
+    samples: &'a [f64],
+    residue: u64,
+    modulus: u64,
+}
+
+impl WithSimd for PhasorSum<'_> {
+    type Output = Complex64;
+
+    #[inline(always)]
+    fn with_simd<S: Simd>(self, _simd: S) -> Complex64 {
+        let Self { samples, residue, modulus } = self;
+        let turn = |phase: u64| Complex64::cis(-TAU * (phase as f64 / modulus as f64));
+        let mut phase = 0;
+        let (mut cosines, mut sines) = ([0.0; RENEWAL], [0.0; RENEWAL]);
+        for (cosine, sine) in cosines.iter_mut().zip(&mut sines) {
+            let power = turn(phase);
+            (*cosine, *sine) = (power.re, power.im);
+            phase = step(phase, residue, modulus);
         }
-        sum += (lanes[0] + lanes[1] + lanes[2] + lanes[3]) * turn(start);
-        start = step(start, block_step, modulus);
+        let block_step = phase;
+        let mut start = 0;
+        let mut sum = Complex64::ZERO;
+        for block in samples.chunks(RENEWAL) {
+            // Sums side by side: one alone waits for each addition.
+            let (mut real, mut imaginary) = ([0.0; LANES], [0.0; LANES]);
+            let whole = block.chunks_exact(LANES);
+            let rest = block.len() - whole.remainder().len();
+            let powers = cosines.chunks_exact(LANES).zip(sines.chunks_exact(LANES));
+            for (samples, (cosines, sines)) in whole.zip(powers) {
+                for lane in 0..LANES {
+                    real[lane] += samples[lane] * cosines[lane];
+                    imaginary[lane] += samples[lane] * sines[lane];
+                }
+            }
+            for (lane, sample) in block[rest..].iter().enumerate() {
+                real[lane] += sample * cosines[rest + lane];
+                imaginary[lane] += sample * sines[rest + lane];
+            }
+            sum += Complex64::new(real.iter().sum(), imaginary.iter().sum()) * turn(start);
+            start = step(start, block_step, modulus);
+        }
+        sum
     }
-    sum
 }
 
 #[cfg(test)]

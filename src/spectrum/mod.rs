@@ -5,20 +5,24 @@
 //! - a **density** is two-sided, in unit²/Hz, so that its integral over `−f_s/2 … f_s/2` is the mean square. For a phase in
 //!   radians it equals the single-sideband noise L directly: L is half the one-sided density (IEEE Std 1139), no further −3 dB.
 
+mod band;
 mod correlation;
 mod density;
 mod fft;
 mod ideal;
 mod local_noise;
 pub mod oracle;
+mod record;
 mod sideband;
 mod window;
 
+pub use band::{BandPlan, BandSpectrum};
 pub use correlation::{correlate, correlate_each};
 pub use density::{Density, DensitySettings};
 pub use fft::{FftScratch, FftStage};
 pub use ideal::{ideal_density, ideal_phase_rms_rad};
 pub use local_noise::{Neighbourhood, local_line_power};
+pub use record::{RecordSpectrum, RecordWindow};
 pub use sideband::{divided_dbc, sideband_dbc};
 pub use window::Window;
 

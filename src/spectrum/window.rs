@@ -27,7 +27,7 @@ const BLOCK: usize = 64;
 
 impl Window {
     /// Returns the alternating cosine coefficients `a_0 − a_1·cos + a_2·cos 2 − …`.
-    const fn coefficients(self) -> &'static [f64] {
+    pub(super) const fn coefficients(self) -> &'static [f64] {
         match self {
             Self::Rectangular => &[1.0],
             Self::Hann => &[0.5, 0.5],
@@ -44,17 +44,14 @@ impl Window {
         // cos(a + b) from two short tables: one cosine a sample would cost more than the correlation it serves.
         let turn = |n: usize| Complex64::cis(TAU * n as f64 / length as f64);
         let fine: Vec<Complex64> = (0..BLOCK.min(length)).map(turn).collect();
-        (0..length)
-            .step_by(BLOCK)
-            .flat_map(|start| {
-                let coarse = turn(start);
-                let count = BLOCK.min(length - start);
-                fine[..count]
-                    .iter()
-                    .map(move |step| self.weight(coarse.re * step.re - coarse.im * step.im))
-                    .collect::<Vec<_>>()
-            })
-            .collect()
+        let mut weights = vec![0.0; length];
+        for (block, part) in weights.chunks_mut(BLOCK).enumerate() {
+            let coarse = turn(block * BLOCK);
+            for (weight, step) in part.iter_mut().zip(&fine) {
+                *weight = self.weight(coarse.re * step.re - coarse.im * step.im);
+            }
+        }
+        weights
     }
 
     /// Returns the weight where the first cosine is `cosine`; cos 2θ and cos 3θ are polynomials in it.

@@ -57,7 +57,7 @@ const CHANGES: [(&str, &str, &str); 26] = [
     ("harmonics = 5", "harmonics = 4", "boundary.harmonics"),
     ("value = \"-58 dBc\"", "value = \"-50 dBc\"", "anchor[1].level"),
     ("frequency = \"26 MHz\"", "frequency = \"27 MHz\"", "clock[1].frequency"),
-    ("margin = \"4 dB\"", "margin = \"9 dB\"", "limits.margin"),
+    ("value = \"4 dB\"", "value = \"9 dB\"", "limits.margin"),
     ("injection = \"-10.7 MHz\"", "injection = \"-10.8 MHz\"", "channels[1].injection"),
     ("span = \"3 MHz\"", "span = \"2 MHz\"", "analysis.span"),
 ];

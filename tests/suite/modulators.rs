@@ -3,6 +3,7 @@
 #![allow(clippy::unwrap_used, reason = "a failed unwrap is a failed test, also in the functions that tests share")]
 
 mod dither;
+mod phases;
 mod structures;
 
 use thornmap::base::Exact;
