@@ -224,7 +224,16 @@ impl<'t> Reader<'t> {
     pub fn text(&mut self, section: &Section, name: &'static str) -> Option<Located<String>> {
         let value = self.plain(section, name)?;
         match value.get_ref().as_str() {
-            Some(text) => Some(Located { value: text.to_owned(), span: value.span() }),
+            Some(text) => {
+                let shown = without_direction_controls(text);
+                if shown != text {
+                    let key = section.key(name);
+                    self.warnings.push(format!(
+                        "{key}: direction controls are shown as \u{fffd}: they would turn figures round"
+                    ));
+                }
+                Some(Located { value: shown, span: value.span() })
+            }
             None => {
                 let text = format!("found {}, expected a text in quotes", describe(value.get_ref()));
                 self.problem(&section.key(name), &value.span(), text);
@@ -572,4 +581,11 @@ pub fn did_you_mean(typed: &str, known: &[&str]) -> Option<String> {
         .filter(|(distance, word)| *distance <= 1.max(word.chars().count().min(typed.chars().count()) / 3))
         .min_by_key(|(distance, _)| *distance)
         .map(|(_, word)| format!("did you mean \"{word}\"?"))
+}
+
+/// Returns a text in which controls that override, embed or isolate a writing direction are replaced: one that is left
+/// open turns round the figures of the sentence it is put into. Letters of every script stay as they are.
+fn without_direction_controls(text: &str) -> String {
+    let is_control = |c: char| matches!(c, '\u{202a}'..='\u{202e}' | '\u{2066}'..='\u{2069}');
+    text.chars().map(|c| if is_control(c) { '\u{fffd}' } else { c }).collect()
 }

@@ -234,3 +234,11 @@ fn an_offset_current_may_be_a_time_or_a_share() {
     let time_ps = 1e12 / pfd_hz / 25.0;
     assert!((offset(&format!("offset_time = \"{time_ps} ps\"")) / 40e-6 - 1.0).abs() < 1e-9);
 }
+
+#[test]
+fn direction_controls_are_replaced_and_scripts_are_kept() {
+    let text = changed("title = \"small\"", "title = \"\u{202e}a \u{5d0}\u{5d1} \u{200f}b\u{2069}\"");
+    let plan = valid(&text);
+    assert_eq!(plan.identity.title, "\u{fffd}a \u{5d0}\u{5d1} \u{200f}b\u{fffd}");
+    assert!(plan.warnings.iter().any(|w| w.contains("plan.title: direction controls")), "{:?}", plan.warnings);
+}

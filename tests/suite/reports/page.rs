@@ -210,7 +210,7 @@ fn the_page_is_closed_to_everything_but_its_own_style_and_script() {
 }
 
 /// Asserts that every tag of a picture is closed in turn and that no figure is missing from a path.
-fn assert_well_formed(name: &str, svg: &str) {
+pub(super) fn assert_well_formed(name: &str, svg: &str) {
     let mut open: Vec<&str> = Vec::new();
     for piece in svg.split('<').skip(1) {
         let (tag, _) = piece.split_once('>').unwrap_or_else(|| panic!("{name}: {piece}"));

@@ -6,7 +6,7 @@ use thornmap::plan::parse_plan;
 use thornmap::report::{RenderOptions, pdf, render, render_with};
 use thornmap::survey::survey;
 
-use super::page::{assert_decibels, assert_hertz, plain};
+use super::page::{assert_decibels, assert_hertz, assert_well_formed, plain};
 use super::{ALL, fixture, json, text, worst_tone};
 
 const EVERYTHING: RenderOptions = RenderOptions { markdown: true, png: true, ..ALL };
@@ -220,4 +220,31 @@ fn pictures_of_dots_are_whole_and_the_same_every_time() {
 fn without_a_browser_pdf_says_what_to_do() {
     let error = pdf(b"<p>x</p>", Some(&"no-such-browser-here".into())).unwrap_err().to_string();
     assert!(error.contains("no-such-browser-here") && error.contains("print report.html"), "{error}");
+}
+
+#[test]
+fn a_hostile_plan_is_inert_in_every_file() {
+    let path = concat!(env!("CARGO_MANIFEST_DIR"), "/tests/browser/hostile.toml");
+    let plan = parse_plan(&std::fs::read_to_string(path).unwrap(), "hostile", &|_| Err("none".into())).unwrap();
+    let set = render(&survey(&plan, &|_| {}).unwrap(), &EVERYTHING).unwrap();
+    for file in set.files.iter().filter(|file| file.path.ends_with(".svg")) {
+        assert_well_formed(&file.path, std::str::from_utf8(&file.bytes).unwrap());
+    }
+    for path in ["report.html", "report.md"] {
+        let text = text(&set, path);
+        for raw in ["<script>alert", "<img", "<iframe", "<b onclick", "<svg onload", "\u{202e}"] {
+            assert!(!text.contains(raw), "{raw} in {path}");
+        }
+        assert!(text.contains("alert(1)"), "the title is shown in {path}");
+    }
+    let csv = text(&set, "channels.csv");
+    let mut cells = 0;
+    for record in csv::Reader::from_reader(csv.as_bytes()).records() {
+        for cell in &record.unwrap() {
+            let is_formula = cell.starts_with(['=', '+', '-', '@', '\t', '\r']) && cell.parse::<f64>().is_err();
+            assert!(!is_formula || cell.ends_with(" Hz"), "{cell}");
+            cells += usize::from(cell.starts_with("'="));
+        }
+    }
+    assert!(cells > 10, "{cells} cells made inert");
 }
