@@ -142,7 +142,7 @@ pub(crate) fn document<'a>(
         notes: identity.notes.as_deref(),
         plan_sha256: &result.plan.sha256,
         version: env!("CARGO_PKG_VERSION"),
-        command: command(&result.plan.stem, options),
+        command: command(&result.plan.stem, options, cures_flag(result, dossier)),
         sentence: verdict::sentence(&result.summary),
         cause: verdict::cause(&result.summary),
         shares: verdict::shares(&result.summary),
@@ -297,8 +297,17 @@ fn check(result: &SurveyResult) -> String {
     }
 }
 
+/// Returns the option that makes the same parts again, where the program would not by itself.
+fn cures_flag(result: &SurveyResult, dossier: &Dossier) -> &'static str {
+    match (dossier.remedy.is_some(), result.summary.channels <= MOST_CHANNELS) {
+        (true, false) => " --cures always",
+        (false, true) => " --cures never",
+        _ => "",
+    }
+}
+
 /// Returns the command that makes this report again, safe to paste into a shell.
-fn command(stem: &str, options: &RenderOptions) -> String {
+fn command(stem: &str, options: &RenderOptions, cures: &str) -> String {
     let mut command = "thornmap survey".to_owned();
     if stem != "demo" {
         let plain = stem.chars().all(|c| c.is_ascii_alphanumeric() || "._-".contains(c)) && !stem.starts_with('-');
@@ -314,6 +323,7 @@ fn command(stem: &str, options: &RenderOptions) -> String {
     for (_, flag) in flags.into_iter().filter(|(is_set, _)| *is_set) {
         command.push_str(flag);
     }
+    command.push_str(cures);
     command
 }
 
@@ -324,9 +334,12 @@ mod tests {
     #[test]
     fn commands_survive_a_shell() {
         let plain = RenderOptions::default();
-        assert_eq!(command("demo", &plain), "thornmap survey");
+        assert_eq!(command("demo", &plain, ""), "thornmap survey");
         let more = RenderOptions { detail: Detail::Flagged, markdown: true, ..plain };
-        assert_eq!(command("petrel", &more), "thornmap survey petrel.toml --detail flagged --markdown");
-        assert_eq!(command("it's; rm x", &plain), "thornmap survey 'it'\\''s; rm x.toml'");
+        assert_eq!(
+            command("petrel", &more, " --cures never"),
+            "thornmap survey petrel.toml --detail flagged --markdown --cures never"
+        );
+        assert_eq!(command("it's; rm x", &plain, ""), "thornmap survey 'it'\\''s; rm x.toml'");
     }
 }

@@ -127,7 +127,7 @@ fn the_page_tabulates_the_figures_of_survey_json() {
         format!("{} are bad, {} marginal and {} clear", summary["bad"], summary["marginal"], summary["clear"]);
     assert!(html.contains(&sentence), "{sentence}");
     assert!(html.contains(json["plan_sha256"].as_str().unwrap()));
-    assert!(html.contains("<code><bdi>thornmap survey petrel.toml</bdi></code>"));
+    assert!(html.contains("<code><bdi>thornmap survey petrel.toml --cures never</bdi></code>"));
 }
 
 #[test]
@@ -290,5 +290,5 @@ fn flagged_detail_shows_only_flagged_rows_and_the_command_that_made_it() {
     let result = fixture::survey(200);
     let html = text(&render(&result, &FLAGGED).unwrap(), "report.html");
     assert_eq!(table_rows(&html).len() as u64, result.summary.bad + result.summary.marginal);
-    assert!(html.contains("thornmap survey petrel.toml --detail flagged"));
+    assert!(html.contains("thornmap survey petrel.toml --detail flagged --cures never"));
 }
