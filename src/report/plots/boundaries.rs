@@ -1,6 +1,6 @@
 //! How far every channel stands from its nearest boundary.
 
-use std::collections::BTreeSet;
+use std::collections::{BTreeMap, BTreeSet};
 
 use super::Plot;
 use super::frame::{Axis, ChannelAxis, Frame, Hold, ROOM, plot, round_step};
@@ -13,6 +13,11 @@ use crate::survey::SurveyResult;
 const NAME: &str = "boundaries";
 const TITLE: &str = "Distance to the nearest boundary";
 const HEIGHT: u32 = 380;
+/// Fractions named at most, the room of a name, and its distance from its channel.
+const MOST_LABELS: usize = 24;
+const LABEL_WIDTH: f64 = 38.0;
+const LABEL_HEIGHT: f64 = 13.0;
+const LABEL_DROP: f64 = 6.0;
 
 /// Returns the plot, or `None` where no channel has a boundary.
 pub(super) fn boundaries(result: &SurveyResult) -> Result<Option<Plot>, ReportError> {
@@ -48,6 +53,7 @@ pub(super) fn boundaries(result: &SurveyResult) -> Result<Option<Plot>, ReportEr
     ];
     line_labels(&mut frame, labels);
     marks(&mut frame, &along, channels);
+    fractions(&mut frame, &along, channels);
     frame.finish(NAME)?;
     Ok(Some(plot(NAME, TITLE, caption(result, held), HEIGHT, &body)))
 }
@@ -71,6 +77,32 @@ fn marks(frame: &mut Frame<'_>, along: &ChannelAxis, channels: &[ChannelResult])
             if taken.insert(spot) {
                 frame.mark(place, verdict);
             }
+        }
+    }
+}
+
+/// Writes p/q at the channel that stands nearest to each fraction, nearest fractions first, where there is room.
+fn fractions(frame: &mut Frame<'_>, along: &ChannelAxis, channels: &[ChannelResult]) {
+    let mut nearest: BTreeMap<(i128, u64), (f64, f64)> = BTreeMap::new();
+    for (position, channel) in channels.iter().enumerate() {
+        let Some(near) = channel.boundary.as_ref().filter(|near| near.family == "comparison") else { continue };
+        let found = nearest.entry((near.p, near.q)).or_insert((f64::INFINITY, 0.0));
+        if near.tone_offset_hz < found.0 {
+            *found = (near.tone_offset_hz, along.at(position, channel));
+        }
+    }
+    let mut wanted: Vec<_> = nearest.into_iter().collect();
+    wanted.sort_by(|a, b| a.1.0.total_cmp(&b.1.0));
+    let (left, _, right, bottom) = frame.field();
+    let mut taken: Vec<(f64, f64)> = Vec::new();
+    for ((p, q), (offset_hz, at)) in wanted {
+        let (x, y) = frame.point(at, offset_hz);
+        let y = if y + LABEL_DROP + LABEL_HEIGHT < bottom { y + LABEL_DROP } else { y - LABEL_DROP - LABEL_HEIGHT };
+        let x = x.clamp(left + LABEL_WIDTH / 2.0, right - LABEL_WIDTH / 2.0);
+        let is_free = taken.iter().all(|(a, b)| (a - x).abs() > LABEL_WIDTH || (b - y).abs() > LABEL_HEIGHT);
+        if is_free && taken.len() < MOST_LABELS {
+            frame.text(&format!("{p}/{q}"), (x, y), 10.0, Paint::Faint, Hold::Middle);
+            taken.push((x, y));
         }
     }
 }
