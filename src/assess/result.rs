@@ -198,6 +198,21 @@ pub struct Contributions {
     pub clock_dbc: Option<f64>,
 }
 
+impl Contributions {
+    /// Returns the parts that are known, with the name of each, in a fixed order.
+    pub fn known(&self) -> impl Iterator<Item = (&'static str, f64)> {
+        [
+            ("coupling", self.coupling_dbc),
+            ("nonlinearity", self.nonlinearity_dbc),
+            ("modulator", self.modulator_dbc),
+            ("leakage", self.leakage_dbc),
+            ("clock", self.clock_dbc),
+        ]
+        .into_iter()
+        .filter_map(|(name, level)| Some((name, level?)))
+    }
+}
+
 /// One tone at one exact offset.
 #[derive(Debug, Clone, Serialize)]
 pub struct Tone {

@@ -23,7 +23,7 @@ pub fn run(arguments: &ExportArguments) -> Result<(), Failure> {
         RegisterMapError::Content { .. } => Failure::Content(format!("error: register map:\n{error}")),
     })?;
     let voice = Voice::from_quiet(arguments.quiet);
-    let bar = Bar::new(plan.groups.iter().map(|group| group.channels.len()).sum(), "channels", voice);
+    let bar = Bar::new(plan.channel_count(), "channels", voice);
     let result = in_pool(arguments.jobs, || survey(&plan, &|items| bar.advance(items)))?
         .map_err(|error| assess_failure(&plan, &error))?;
     bar.finish();

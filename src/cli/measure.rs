@@ -22,7 +22,7 @@ pub fn run(arguments: &MeasureArguments) -> Result<(), Failure> {
     let out = arguments.out.clone().unwrap_or_else(|| PathBuf::from("reports").join(&plan.stem));
     check_target(&out).map_err(report_failure)?;
     let voice = Voice::from_quiet(arguments.common.quiet);
-    let bar = Bar::new(plan.groups.iter().map(|group| group.channels.len()).sum(), "channels", voice);
+    let bar = Bar::new(plan.channel_count(), "channels", voice);
     let classes = match arguments.each {
         ClassChoice::Fraction => Classes::Fraction,
         ClassChoice::Denominator => Classes::Denominator,

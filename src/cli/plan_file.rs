@@ -41,7 +41,7 @@ fn explained(failure: PlanFailure) -> Failure {
 /// As `read`.
 pub fn check(path: &Path) -> Result<(), Failure> {
     let plan = read(path)?;
-    let channels: u64 = plan.groups.iter().map(|group| group.channels.len()).sum();
+    let channels = plan.channel_count();
     let groups = plan.groups.len();
     let mut text = format!(
         "{}: valid plan \"{}\", {channels} channel{} in {groups} group{}\n",

@@ -4,9 +4,7 @@ use std::path::PathBuf;
 
 use crate::assess::Setup;
 use crate::base::{Exact, Frequency};
-use crate::decide::remedy::{
-    Costs, Criterion, IntervalError, Kind, default_criterion, hunt, intervals, pfd_settings, remedy, single_changes,
-};
+use crate::decide::remedy::{Costs, Criterion, IntervalError, Kind, default_criterion, hunt, intervals, remedy, steps};
 use crate::plan::Plan;
 use crate::report::{
     add_files, check_target, hunt_json, hunt_text, intervals_json, intervals_text, remedy_files, remedy_json,
@@ -49,8 +47,7 @@ fn run_cures(plan: &Plan, arguments: &RemedyArguments) -> Result<(), Failure> {
         None => default_criterion(plan),
     };
     let voice = Voice::from_quiet(arguments.common.quiet);
-    let steps = 2 * single_changes(plan, &costs).len() + pfd_settings(plan).len();
-    let bar = Bar::new(steps as u64, "changes", voice);
+    let bar = Bar::new(steps(plan, &costs), "changes", voice);
     let found = in_pool(arguments.common.jobs, || remedy(plan, &costs, criterion, &|| bar.advance(1)))?
         .map_err(|error| assess_failure(plan, &error))?;
     bar.finish();

@@ -33,7 +33,7 @@ pub fn run(arguments: &SurveyArguments) -> Result<(), Failure> {
     let neighbours = arguments.beside.iter().map(|path| plan_file::read(path)).collect::<Result<Vec<Plan>, _>>()?;
     let out = arguments.out.clone().unwrap_or_else(|| PathBuf::from("reports").join(&plan.stem));
     check_target(&out).map_err(report_failure)?;
-    let channels: u64 = plan.groups.iter().map(|group| group.channels.len()).sum();
+    let channels = plan.channel_count();
     let detail = match arguments.detail {
         Some(DetailChoice::All) => Detail::All,
         Some(DetailChoice::Flagged) => Detail::Flagged,

@@ -7,7 +7,7 @@ use crate::survey::SurveyResult;
 
 use super::compare::{Comparison, compare, default_options};
 use super::measure_list::{Classes, MeasureList, measure_list};
-use super::remedy::{Costs, Remedy, default_criterion, pfd_settings, remedy_of, single_changes};
+use super::remedy::{self, Costs, Remedy, default_criterion, remedy_of};
 
 /// Channels up to which a dossier is made unless it is asked for: a few seconds' work.
 pub const MOST_CHANNELS: u64 = 2_000;
@@ -44,9 +44,7 @@ pub fn dossier(result: &SurveyResult, done: &(dyn Fn() + Sync)) -> Result<Dossie
 /// Returns how often `done` of [`dossier`] is called at most.
 #[must_use]
 pub fn steps(plan: &Plan) -> u64 {
-    let tried =
-        2 * single_changes(plan, &Costs::default()).len() + pfd_settings(plan).len() + default_options(plan).len();
-    tried as u64
+    remedy::steps(plan, &Costs::default()) + default_options(plan).len() as u64
 }
 
 /// Returns the noise budget of the channel whose spectrum the survey shows, else of the first legal one; it is made for

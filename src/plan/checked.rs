@@ -69,6 +69,12 @@ impl Plan {
     pub fn basis_of(&self, key: &str) -> Basis {
         self.basis.get(key).copied().unwrap_or(Basis::Default)
     }
+
+    /// Returns the number of channels over all groups.
+    #[must_use]
+    pub fn channel_count(&self) -> u64 {
+        self.groups.iter().map(|group| group.channels.len()).sum()
+    }
 }
 
 /// Title block of the plan; what is not stated stays `None`.

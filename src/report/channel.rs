@@ -185,15 +185,7 @@ fn tone_line(tone: &Tone) -> String {
         if tone.inside_loop { "yes" } else { "no" },
         tone.label
     );
-    let parts = [
-        ("coupling", tone.contributions.coupling_dbc),
-        ("nonlinearity", tone.contributions.nonlinearity_dbc),
-        ("modulator", tone.contributions.modulator_dbc),
-        ("leakage", tone.contributions.leakage_dbc),
-        ("clock", tone.contributions.clock_dbc),
-    ];
-    let known: Vec<String> =
-        parts.iter().filter_map(|(name, level)| level.map(|level| format!("{name} {level:.2}"))).collect();
+    let known: Vec<String> = tone.contributions.known().map(|(name, level)| format!("{name} {level:.2}")).collect();
     if !known.is_empty() {
         line.push_str(&format!("      parts [dBc]: {}\n", known.join(", ")));
     }

@@ -6,7 +6,7 @@ use askama::Template;
 use askama::filters::Escaper;
 
 use super::ReportError;
-use super::document::Document;
+use super::document::{Document, Row};
 
 /// Rows of the channel table in Markdown: a reader of a pull request scrolls no further.
 const MOST_ROWS: usize = 200;
@@ -15,7 +15,8 @@ const MOST_ROWS: usize = 200;
 #[template(path = "report.md")]
 struct Page<'a> {
     doc: &'a Document<'a>,
-    most_rows: usize,
+    /// The first rows of the channel table.
+    rows: &'a [Row],
 }
 
 /// Returns the text of `report.md`.
@@ -23,7 +24,7 @@ struct Page<'a> {
 /// # Errors
 /// `Page` where the template fails.
 pub(crate) fn markdown(doc: &Document<'_>) -> Result<String, ReportError> {
-    Ok(Page { doc, most_rows: MOST_ROWS }.render()?)
+    Ok(Page { doc, rows: &doc.rows[..doc.rows.len().min(MOST_ROWS)] }.render()?)
 }
 
 /// Makes text inert in Markdown, tables included.

@@ -10,7 +10,7 @@ use super::paint::plain_css;
 use super::plots::Plot;
 
 /// Dots per unit of the picture: sharp on paper at the width of a page.
-const DOTS_PER_UNIT: f32 = 2.0;
+const DOTS_PER_UNIT: u16 = 2;
 
 /// Latin, Greek, arrows and mathematical signs of DejaVu Sans; its licence stands beside it.
 const FONT: &[u8] = include_bytes!("../../assets/DejaVuSans-subset.ttf");
@@ -36,9 +36,8 @@ pub(crate) fn png(plot: &Plot) -> Result<Vec<u8>, ReportError> {
     // Screens of both kinds are for browsers: here the light colours stand alone.
     let svg = plot.file_with(&plain_css());
     let tree = Tree::from_str(&svg, &options).map_err(|error| failed(error.to_string()))?;
-    let scaled = |length: u32| length * 2;
-    let (wide, high) = (scaled(plot.size.0), scaled(plot.size.1));
+    let (wide, high) = (plot.size.0 * u32::from(DOTS_PER_UNIT), plot.size.1 * u32::from(DOTS_PER_UNIT));
     let mut dots = Pixmap::new(wide, high).ok_or_else(|| failed("no room for the picture".to_owned()))?;
-    resvg::render(&tree, Transform::from_scale(DOTS_PER_UNIT, DOTS_PER_UNIT), &mut dots.as_mut());
+    resvg::render(&tree, Transform::from_scale(DOTS_PER_UNIT.into(), DOTS_PER_UNIT.into()), &mut dots.as_mut());
     dots.encode_png().map_err(|error| failed(error.to_string()))
 }

@@ -11,7 +11,7 @@ use crate::plan::Plan;
 /// Returns a hunt for a terminal, best first; the JSON output has all.
 #[must_use]
 pub fn hunt_text(plan: &Plan, ranked: &[Hunted]) -> String {
-    let channels: u64 = plan.groups.iter().map(|group| group.channels.len()).sum();
+    let channels = plan.channel_count();
     let mut text = format!(
         "{}: {} references tried on {channels} channels, by {}\n   bad  detector noise  reference\n",
         plan.identity.title,

@@ -99,7 +99,7 @@ pub(super) fn set_sentences(plan: &Plan, set: &SettingSet) -> Vec<String> {
         .filter_map(|s| set.tried.get(*s))
         .map(|tried| format!("{} (PFD {})", tried.setting.name(), tried.pfd))
         .collect();
-    let total: u64 = plan.groups.iter().map(|group| group.channels.len()).sum();
+    let total = plan.channel_count();
     let beyond = set.cover.beyond.len();
     let mut sentences = vec![match (names.len(), beyond) {
         (0, _) => format!("None of the {} settings serves any channel.", set.tried.len()),

@@ -51,14 +51,10 @@ pub fn assess_all(plan: &Plan) -> Result<Vec<ChannelResult>, AssessError> {
     Ok(found.into_iter().flatten().collect())
 }
 
-fn count(plan: &Plan) -> u64 {
-    plan.groups.iter().map(|group| group.channels.len()).sum()
-}
-
 /// Returns the plan made ready, tabulated where that pays.
 fn ready(plan: &Plan) -> Result<Setup<'_>, AssessError> {
     let setup = Setup::new(plan)?;
-    Ok(if count(plan) >= TABULATED_CHANNELS { setup.tabulated() } else { setup })
+    Ok(if plan.channel_count() >= TABULATED_CHANNELS { setup.tabulated() } else { setup })
 }
 
 /// What is done with each block of channels.
@@ -80,7 +76,7 @@ pub fn survey_in_blocks<R: Send, E: From<AssessError> + Send>(
     steps: &Steps<'_, R, E>,
     take: &mut (dyn FnMut(R) -> Result<(), E> + Send),
 ) -> Result<SurveyResult, E> {
-    let count = count(plan);
+    let count = plan.channel_count();
     let setup = ready(plan)?;
     let is_tabulated = count >= TABULATED_CHANNELS;
     let mut tally = Tally::default();

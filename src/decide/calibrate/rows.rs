@@ -84,18 +84,7 @@ pub(super) fn shown(row: &Measured, found: Result<&Found, &String>) -> Calibrate
 }
 
 fn largest_part(tone: &Tone) -> Option<&'static str> {
-    let c = &tone.contributions;
-    [
-        ("coupling", c.coupling_dbc),
-        ("nonlinearity", c.nonlinearity_dbc),
-        ("modulator", c.modulator_dbc),
-        ("leakage", c.leakage_dbc),
-        ("clock", c.clock_dbc),
-    ]
-    .into_iter()
-    .filter_map(|(name, level)| Some((name, level?)))
-    .max_by(|a, b| a.1.total_cmp(&b.1))
-    .map(|(name, _)| name)
+    tone.contributions.known().max_by(|a, b| a.1.total_cmp(&b.1)).map(|(name, _)| name)
 }
 
 /// Returns the residuals of the rows by the mechanism that dominates them.

@@ -24,13 +24,13 @@ impl Sample {
     /// last channel, and the sample's name. A plan that is small enough is taken whole.
     #[must_use]
     pub fn of(plan: &Plan, largest: u64) -> (Plan, Self) {
-        let total: u64 = plan.groups.iter().map(|group| group.channels.len()).sum();
+        let total = plan.channel_count();
         if total <= largest {
             return (plan.clone(), Self { channels: total, of: total, rule: "all channels".to_owned() });
         }
         let mut sampled = plan.clone();
         sampled.groups = plan.groups.iter().map(|group| thinned(group, total, largest)).collect();
-        let channels = sampled.groups.iter().map(|group| group.channels.len()).sum();
+        let channels = sampled.channel_count();
         let rule =
             format!("stratified: one channel in {} of each group, first and last always", total.div_ceil(largest));
         (sampled, Self { channels, of: total, rule })

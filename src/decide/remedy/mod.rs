@@ -101,9 +101,15 @@ pub struct Remedy {
 /// Returns the criterion a plan of this size gets when the user names none.
 #[must_use]
 pub fn default_criterion(plan: &Plan) -> Criterion {
-    let channels: u64 = plan.groups.iter().map(|group| group.channels.len()).sum();
+    let channels = plan.channel_count();
     let pairs = channels.saturating_mul(pfd_settings(plan).len() as u64);
     if pairs <= MOST_FULL_PAIRS { Criterion::Verdict } else { Criterion::Guard }
+}
+
+/// Returns how often `done` of [`remedy`] is called at most.
+#[must_use]
+pub fn steps(plan: &Plan, costs: &Costs) -> u64 {
+    (2 * single_changes(plan, costs).len() + pfd_settings(plan).len()) as u64
 }
 
 /// Returns the remedies of a plan; `done` is called after each change and each setting tried.

@@ -68,17 +68,7 @@ pub(super) fn risk(channel: &ChannelResult, dossier: &Dossier) -> Risk {
 
 /// Returns the parts of a tone, strongest first, then the unknown ones.
 fn parts(tone: &Tone) -> Vec<String> {
-    let c = &tone.contributions;
-    let mut known: Vec<(&str, f64)> = [
-        ("coupling", c.coupling_dbc),
-        ("nonlinearity", c.nonlinearity_dbc),
-        ("modulator", c.modulator_dbc),
-        ("leakage", c.leakage_dbc),
-        ("clock", c.clock_dbc),
-    ]
-    .into_iter()
-    .filter_map(|(name, level)| Some((name, level?)))
-    .collect();
+    let mut known: Vec<(&str, f64)> = tone.contributions.known().collect();
     known.sort_by(|a, b| b.1.total_cmp(&a.1));
     let known = known.into_iter().map(|(name, level)| format!("{name} {}", decibel(level)));
     known.chain(tone.unknown.iter().map(|why| format!("unknown: {}", shortened(why, CELL_CHARS)))).collect()
